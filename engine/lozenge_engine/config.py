@@ -1,0 +1,407 @@
+"""Frozen, checked values: what is computed (`Config`) and what a user sets (`Setup`).
+
+A `Setup` is what a preset file holds and what the page's controls show; it compiles to the
+`Config` of one sprinkling, whose canonical JSON is hashed to key caches and results.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import math
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass, field, replace
+from types import MappingProxyType
+from typing import Any, Literal
+
+from lozenge_engine.errors import refuse
+from lozenge_engine.geometry import (
+    PATCH_AREA,
+    Region,
+    check_regions,
+    equal_row,
+    gaps,
+    with_separation,
+)
+
+__all__ = [
+    "MAX_ELEMENTS",
+    "MAX_SEED",
+    "MODES",
+    "Averaging",
+    "Config",
+    "PointSource",
+    "Rule",
+    "Setup",
+    "SweepPlan",
+    "TruncationMode",
+]
+
+MAX_SEED = 2**53
+MAX_ELEMENTS = 1_000_000
+"""Most elements a density may ask for: a guard against typing errors, not a promise of speed."""
+
+PointKind = Literal["poisson", "fixed", "file"]
+RuleKind = Literal["none", "root_count", "union_count", "equal_share", "fixed_number"]
+TruncationMode = Literal[
+    "two_stages",
+    "patch_only",
+    "regions_only",
+    "none",
+    "union_count",
+    "equal_share",
+    "fixed_number",
+    "custom",
+]
+
+
+def _number(where: str, value: object, *, low: float, high: float, allowed: str) -> float:
+    """Return `value` as a float in [low, high], or refuse it."""
+    if (
+        isinstance(value, bool)
+        or not isinstance(value, int | float)
+        or not math.isfinite(value)
+        or not low <= value <= high
+    ):
+        raise refuse(where, given=value, allowed=allowed, do=f"change {where}")
+    return float(value)
+
+
+def _whole(where: str, value: object, *, low: int, high: int) -> int:
+    """Return `value` as an int in [low, high], or refuse it."""
+    if isinstance(value, bool) or not isinstance(value, int) or not low <= value <= high:
+        raise refuse(
+            where,
+            given=value,
+            allowed=f"a whole number from {low} to {high}",
+            do=f"change {where}",
+        )
+    return value
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PointSource:
+    """Where the elements come from.
+
+    Parameters
+    ----------
+    kind : {"poisson", "fixed", "file"}
+        Poisson sprinkling, a fixed count round(2 density), or imported points.
+    density : float
+        Elements per unit area; the patch has area 2. For imported points N/2.
+    seed : int
+        0 <= seed < 2**53; not used for imported points.
+    file, sha256 : str or None
+        For imported points only: name of the file and hash of the point set.
+    """
+
+    kind: PointKind = "poisson"
+    density: float = 1000.0
+    seed: int = 1
+    file: str | None = None
+    sha256: str | None = None
+
+    def __post_init__(self) -> None:
+        if self.kind not in ("poisson", "fixed", "file"):
+            raise refuse(
+                "kind", given=self.kind, allowed="poisson, fixed or file", do="choose one of them"
+            )
+        high = MAX_ELEMENTS / PATCH_AREA
+        density = _number(
+            "density",
+            self.density,
+            low=1.0,
+            high=high,
+            allowed=f"1 to {high:g} elements per unit area (the patch has area 2)",
+        )
+        object.__setattr__(self, "density", density)
+        _whole("seed", self.seed, low=0, high=MAX_SEED - 1)
+        if (self.kind == "file") != (self.sha256 is not None):
+            raise refuse(
+                "points",
+                given=f"kind {self.kind} with sha256 {self.sha256}",
+                allowed="a hash of the points for kind file, and for no other kind",
+                do="load the points from their file",
+            )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Rule:
+    """Which modes of one stage count.
+
+    Parameters
+    ----------
+    kind : str
+        ``none``; ``root_count``: |lambda| > alpha sqrt(n)/(4 pi), n the elements of the
+        operator's own region; ``union_count``: n is the union's count for every region;
+        ``equal_share``: n is the union's count over the number of regions;
+        ``fixed_number``: the `number` largest positive modes of each region.
+    alpha : float
+        Multiple of the threshold, 0.05 to 20; for the three kinds with a count.
+    number : int
+        Positive modes to keep, for ``fixed_number``.
+    """
+
+    kind: RuleKind = "root_count"
+    alpha: float = 1.0
+    number: int = 20
+
+    def __post_init__(self) -> None:
+        kinds = ("none", "root_count", "union_count", "equal_share", "fixed_number")
+        if self.kind not in kinds:
+            raise refuse("rule", given=self.kind, allowed=", ".join(kinds), do="choose one of them")
+        alpha = _number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
+        # What a kind does not use is set to its default, so that equal rules hash equally.
+        scaled = self.kind in ("root_count", "union_count", "equal_share")
+        object.__setattr__(self, "alpha", alpha if scaled else 1.0)
+        _whole("number", self.number, low=1, high=100_000)
+        object.__setattr__(self, "number", self.number if self.kind == "fixed_number" else 20)
+
+
+MODES: Mapping[str, tuple[RuleKind, RuleKind]] = MappingProxyType(
+    {
+        "two_stages": ("root_count", "root_count"),
+        "patch_only": ("root_count", "none"),
+        "regions_only": ("none", "root_count"),
+        "none": ("none", "none"),
+        "union_count": ("root_count", "union_count"),
+        "equal_share": ("root_count", "equal_share"),
+        "fixed_number": ("root_count", "fixed_number"),
+    }
+)
+"""Named combinations: the kind of the patch's rule and of the regions' rule."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Config:
+    """One computation on one sprinkling: all that its numbers depend on.
+
+    Parameters
+    ----------
+    points : PointSource
+        The elements.
+    realisation : int
+        0 for the sprinkling of the seed itself, then 1, 2, ...
+    mass : float
+        In inverse patch half-widths, 0 <= mass <= 0.3 sqrt(density).
+    regions : tuple of Region
+        One to eight, in the order of their letters.
+    patch_rule, region_rule : Rule
+        The two stages of the truncation.
+    order : float
+        Renyi order q >= 0.5; 1 is the von Neumann entropy.
+
+    Raises
+    ------
+    InputError
+        If a value is out of range, or the regions do not fit.
+    """
+
+    points: PointSource = field(default_factory=PointSource)
+    realisation: int = 0
+    mass: float = 0.0
+    regions: tuple[Region, ...] = (Region(half_width=0.5),)
+    patch_rule: Rule = field(default_factory=Rule)
+    region_rule: Rule = field(default_factory=Rule)
+    order: float = 1.0
+
+    def __post_init__(self) -> None:
+        _whole("realisation", self.realisation, low=0, high=10**9)
+        if self.points.kind == "file" and self.realisation:
+            raise refuse(
+                "realisation",
+                given=self.realisation,
+                allowed="0 for imported points: there is one such set",
+                do="set sprinklings to 1",
+            )
+        high = 0.3 * math.sqrt(self.points.density)
+        mass = _number(
+            "mass",
+            self.mass,
+            low=0.0,
+            high=high,
+            allowed=f"0 to 0.3 sqrt(density) = {high:.6g} inverse half-widths",
+        )
+        object.__setattr__(self, "mass", mass)
+        check_regions(self.regions)
+        if self.patch_rule.kind in ("union_count", "equal_share"):
+            raise refuse(
+                "patch rule",
+                given=self.patch_rule.kind,
+                allowed="none, root_count or fixed_number: the patch is one region",
+                do="use that rule for the regions",
+            )
+        q = _number("order", self.order, low=0.5, high=50.0, allowed="0.5 to 50")
+        object.__setattr__(self, "order", q)
+
+    def canonical_json(self) -> str:
+        """The configuration as JSON with sorted keys and no spaces."""
+        return json.dumps(asdict(self), sort_keys=True, separators=(",", ":"), allow_nan=False)
+
+    @property
+    def digest(self) -> str:
+        """SHA-256 of the canonical JSON, in hexadecimal."""
+        return hashlib.sha256(self.canonical_json().encode()).hexdigest()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Averaging:
+    """How many sprinklings the numbers are averaged over, 1 to 10 000."""
+
+    sprinklings: int = 8
+
+    def __post_init__(self) -> None:
+        _whole("sprinklings", self.sprinklings, low=1, high=10_000)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SweepPlan:
+    """The three sweeps of the page; each is a range and a number of points.
+
+    Parameters
+    ----------
+    density_low, density_high : float
+        Ends of the density ladder at fixed geometry, elements per unit area.
+    density_points : int
+        Rungs of it, 3 to 40, equally spaced in the logarithm.
+    size_low, size_high : float
+        Ends of the size sweep at fixed density, as multiples of the regions' half-widths.
+    size_points : int
+        Points of it, 3 to 40.
+    separation_points : int
+        Points of the separation sweep, 2 to 100, from touching to the largest that fits.
+    smallest_region : int
+        Regions expected to hold fewer elements than this are left out of fits.
+    """
+
+    density_low: float = 500.0
+    density_high: float = 4000.0
+    density_points: int = 6
+    size_low: float = 0.5
+    size_high: float = 1.0
+    size_points: int = 6
+    separation_points: int = 20
+    smallest_region: int = 80
+
+    def __post_init__(self) -> None:
+        high = MAX_ELEMENTS / PATCH_AREA
+        for name in ("density_low", "density_high"):
+            value = _number(
+                name, getattr(self, name), low=10.0, high=high, allowed=f"10 to {high:g}"
+            )
+            object.__setattr__(self, name, value)
+        for name in ("size_low", "size_high"):
+            value = _number(name, getattr(self, name), low=0.05, high=20.0, allowed="0.05 to 20")
+            object.__setattr__(self, name, value)
+        _whole("density_points", self.density_points, low=3, high=40)
+        _whole("size_points", self.size_points, low=3, high=40)
+        _whole("separation_points", self.separation_points, low=2, high=100)
+        _whole("smallest_region", self.smallest_region, low=0, high=100_000)
+        for name in ("density", "size"):
+            low, top = getattr(self, f"{name}_low"), getattr(self, f"{name}_high")
+            if not low < top:
+                raise refuse(
+                    f"{name} sweep",
+                    given=f"{low:g} to {top:g}",
+                    allowed="a lower end below the upper end",
+                    do=f"lower {name}_low",
+                )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Setup:
+    """What a user sets: the engine part of a preset.
+
+    Parameters
+    ----------
+    points : PointSource
+        The elements.
+    mass : float
+        In inverse patch half-widths.
+    region_count, half_width, separation : int, float, float
+        The equal row; with a list of regions only `separation` acts (its mean gap).
+    region_list : tuple of Region or None
+        An explicit list instead of the row.
+    truncation_mode : str
+        A key of `MODES`, or ``custom``.
+    alpha : float
+        Multiple of the threshold, for both stages of a named mode.
+    number : int
+        Positive modes per region, for the mode ``fixed_number``.
+    patch_rule, region_rule : Rule
+        The stages of the mode ``custom``; otherwise ignored.
+    order : float
+        Renyi order.
+    averaging : Averaging
+        Number of sprinklings.
+    sweeps : SweepPlan
+        The three sweeps.
+    """
+
+    points: PointSource = field(default_factory=PointSource)
+    mass: float = 0.0
+    region_count: int = 2
+    half_width: float = 0.3
+    separation: float = 0.2
+    region_list: tuple[Region, ...] | None = None
+    truncation_mode: TruncationMode = "two_stages"
+    alpha: float = 1.0
+    number: int = 20
+    patch_rule: Rule = field(default_factory=Rule)
+    region_rule: Rule = field(default_factory=Rule)
+    order: float = 1.0
+    averaging: Averaging = field(default_factory=Averaging)
+    sweeps: SweepPlan = field(default_factory=SweepPlan)
+
+    def __post_init__(self) -> None:
+        if self.truncation_mode != "custom" and self.truncation_mode not in MODES:
+            raise refuse(
+                "truncation_mode",
+                given=self.truncation_mode,
+                allowed=", ".join((*MODES, "custom")),
+                do="choose one of them",
+            )
+        self.config()
+
+    def regions(self) -> tuple[Region, ...]:
+        """The regions: the list with its gaps scaled to `separation`, or the equal row."""
+        if self.region_list is None:
+            return equal_row(self.region_count, self.half_width, self.separation)
+        mean = self.list_separation()
+        if mean is None or math.isclose(mean, self.separation, rel_tol=1e-9, abs_tol=1e-12):
+            return self.region_list
+        return with_separation(self.region_list, self.separation)
+
+    def list_separation(self) -> float | None:
+        """Mean gap of the list as it was given; None for a row or a single region."""
+        if self.region_list is None or len(self.region_list) < 2:
+            return None
+        old = gaps(self.region_list)
+        return max(0.0, sum(old) / len(old))
+
+    def rules(self) -> tuple[Rule, Rule]:
+        """The rules of the two stages."""
+        if self.truncation_mode == "custom":
+            return self.patch_rule, self.region_rule
+        patch, region = MODES[self.truncation_mode]
+        return (
+            Rule(kind=patch, alpha=self.alpha, number=self.number),
+            Rule(kind=region, alpha=self.alpha, number=self.number),
+        )
+
+    def config(self, realisation: int = 0) -> Config:
+        """Compile to the configuration of one sprinkling."""
+        patch_rule, region_rule = self.rules()
+        return Config(
+            points=self.points,
+            realisation=realisation,
+            mass=self.mass,
+            regions=self.regions(),
+            patch_rule=patch_rule,
+            region_rule=region_rule,
+            order=self.order,
+        )
+
+    def with_(self, **changes: Any) -> Setup:
+        """A copy with some values changed, checked again."""
+        return replace(self, **changes)

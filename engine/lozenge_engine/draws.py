@@ -1,0 +1,191 @@
+"""Which sprinklings to draw for an average or a sweep, and at which placements.
+
+Rungs of the density ladder use sprinklings of their own; sizes and separations share the
+sprinklings (and the patch modes) of the average.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from lozenge_engine.config import Setup
+from lozenge_engine.errors import InputError
+from lozenge_engine.geometry import (
+    PATCH_AREA,
+    Region,
+    check_regions,
+    largest_mean_gap,
+    largest_separation,
+    mirror_images,
+    with_separation,
+)
+from lozenge_engine.pipeline import DENSE_LIMIT
+from lozenge_engine.samples import Draw
+
+__all__ = [
+    "Plan",
+    "average_draws",
+    "density_draws",
+    "placements",
+    "realisations",
+    "scaled",
+    "separation_draws",
+    "size_draws",
+]
+
+FloatArray = NDArray[np.float64]
+
+BRANCH = 10_000
+"""Realisations set aside for each rung of the density ladder."""
+
+
+class Plan(NamedTuple):
+    """What a sweep draws.
+
+    Attributes
+    ----------
+    values : ndarray, shape (M,), float64
+        Densities, multiples of the half-width, or separations.
+    draws : tuple of Draw
+        Units of work, in the order in which they help most.
+    point_of : tuple of int
+        For the density ladder: the rung of each draw; otherwise empty.
+    left_out : tuple of str
+        What cannot be drawn, and why.
+    """
+
+    values: FloatArray
+    draws: tuple[Draw, ...]
+    point_of: tuple[int, ...]
+    left_out: tuple[str, ...]
+
+
+def realisations(setup: Setup) -> int:
+    """Sprinklings to draw; there is only one set of imported points."""
+    return 1 if setup.points.kind == "file" else setup.averaging.sprinklings
+
+
+def placements(setup: Setup, regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]:
+    """The regions and their distinct mirror images, which are equivalent on a sprinkling."""
+    return (regions,) if setup.points.kind == "file" else mirror_images(regions)
+
+
+def average_draws(setup: Setup) -> Plan:
+    """Draws of the average at the present geometry."""
+    layouts = placements(setup, setup.regions())
+    draws = tuple(Draw(config=setup.config(r), layouts=layouts) for r in range(realisations(setup)))
+    return Plan(np.empty(0), draws, (), ())
+
+
+def density_draws(setup: Setup) -> Plan:
+    """Draws of the density ladder at fixed geometry, one sprinkling each.
+
+    Every rung has sprinklings of its own, so that its points are independent.
+    """
+    plan = setup.sweeps
+    ladder = np.geomspace(plan.density_low, plan.density_high, plan.density_points)
+    if setup.points.kind == "file":
+        return Plan(ladder, (), (), ("imported points have one density",))
+    draws, rungs, left_out = [], [], []
+    for j, density in enumerate(ladder):
+        dense = setup.rules()[0].kind == "none"
+        if dense and PATCH_AREA * density > DENSE_LIMIT:
+            left_out.append(f"density {density:.4g}: no cut, over {DENSE_LIMIT} elements")
+            continue
+        try:
+            rung = setup.with_(points=replace(setup.points, density=float(density)))
+        except InputError as error:
+            left_out.append(f"density {density:.4g}: {error}")
+            continue
+        layouts = placements(setup, rung.regions())
+        for r in range(realisations(setup)):
+            draws.append(Draw(config=rung.config(BRANCH * (j + 1) + r), layouts=layouts))
+            rungs.append(j)
+    order = sorted(
+        range(len(draws)), key=lambda i: (draws[i].config.realisation % BRANCH, rungs[i])
+    )
+    return Plan(
+        ladder,
+        tuple(draws[i] for i in order),
+        tuple(rungs[i] for i in order),
+        tuple(left_out),
+    )
+
+
+def scaled(regions: tuple[Region, ...], factor: float) -> tuple[Region, ...]:
+    """All regions scaled about the patch's centre, or about the corner that they touch."""
+    fixed_t, fixed_x = 0.0, 0.0
+    for t, x in ((0.0, -1.0), (0.0, 1.0), (1.0, 0.0), (-1.0, 0.0)):
+        if any(abs(t - ct) + abs(x - cx) < 1e-9 for region in regions for ct, cx in region.corners):
+            fixed_t, fixed_x = t, x
+            break
+    return tuple(
+        replace(
+            r,
+            t0=fixed_t + factor * (r.t0 - fixed_t),
+            x0=fixed_x + factor * (r.x0 - fixed_x),
+            half_width=factor * r.half_width,
+        )
+        for r in regions
+    )
+
+
+def size_draws(setup: Setup) -> Plan:
+    """Draws of the size sweep at fixed density: the whole set of regions is scaled.
+
+    The scaling keeps the patch's centre, or the patch's corner when a region touches one, so that
+    ratios of sizes and gaps do not change; every sprinkling serves all sizes.
+    """
+    plan, regions = setup.sweeps, setup.regions()
+    kept, left_out = [], []
+    for factor in np.geomspace(plan.size_low, plan.size_high, plan.size_points):
+        try:
+            layout = scaled(regions, float(factor))
+            check_regions(layout)
+        except InputError as error:
+            left_out.append(f"size x {factor:.3g}: {error}")
+            continue
+        kept.append((float(factor), placements(setup, layout)))
+    draws = tuple(
+        Draw(
+            config=setup.config(r),
+            layouts=tuple(image for _, images in kept for image in images),
+        )
+        for r in range(realisations(setup))
+        if kept
+    )
+    return Plan(np.array([factor for factor, _ in kept]), draws, (), tuple(left_out))
+
+
+def separation_draws(setup: Setup) -> Plan:
+    """Draws of the separation sweep at fixed density and size, from touching to what fits."""
+    regions = setup.regions()
+    if len(regions) < 2:
+        return Plan(np.empty(0), (), (), ("one region has no separation",))
+    if setup.region_list is None:
+        widest = largest_separation(len(regions), setup.half_width)
+    else:
+        widest = largest_mean_gap(regions)
+    values = np.linspace(0.0, max(0.0, widest * (1 - 1e-12)), setup.sweeps.separation_points)
+    kept, left_out = [], []
+    for value in values:
+        try:
+            layout = with_separation(regions, float(value))
+            check_regions(layout)
+        except InputError as error:
+            left_out.append(f"separation {value:.3g}: {error}")
+            continue
+        kept.append((float(value), placements(setup, layout)))
+    draws = tuple(
+        Draw(
+            config=setup.config(r),
+            layouts=tuple(image for _, images in kept for image in images),
+        )
+        for r in range(realisations(setup))
+        if kept
+    )
+    return Plan(np.array([value for value, _ in kept]), draws, (), tuple(left_out))

@@ -1,0 +1,369 @@
+"""Causal-diamond regions: their light-cone extents, rows of them, and what may stand together.
+
+Light-cone coordinates are u = (t + x)/sqrt 2 and v = (t - x)/sqrt 2; the patch is
+|u|, |v| <= 1/sqrt 2 (half-width 1, area 2).  Lengths are in patch half-widths.
+"""
+
+from __future__ import annotations
+
+import itertools
+import math
+from dataclasses import dataclass, replace
+from typing import NamedTuple
+
+from lozenge_engine.errors import InputError, refuse
+
+__all__ = [
+    "MAX_REGIONS",
+    "PATCH_AREA",
+    "PATCH_EXTENT",
+    "Extent",
+    "Region",
+    "check_regions",
+    "equal_row",
+    "gaps",
+    "largest_half_width",
+    "largest_mean_gap",
+    "largest_separation",
+    "mirror_images",
+    "region_letter",
+    "with_separation",
+]
+
+PATCH_EXTENT = 1.0 / math.sqrt(2.0)
+"""Half the patch's extent in u and in v."""
+PATCH_AREA = 2.0
+MAX_REGIONS = 8
+SLACK = 1e-12
+"""Rounding allowed when corners touch, in patch half-widths."""
+
+
+class Extent(NamedTuple):
+    """Ranges of a region in the light-cone coordinates."""
+
+    u_low: float
+    u_high: float
+    v_low: float
+    v_high: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Region:
+    """A causal diamond, possibly boosted.
+
+    Parameters
+    ----------
+    t0, x0 : float
+        Centre, in patch half-widths.
+    half_width : float
+        Half its width on t = t0 before the boost; its area is 2 half_width**2.
+    boost : float
+        Rapidity y: the u-extent is multiplied by exp(y), the v-extent by exp(-y).
+
+    Raises
+    ------
+    InputError
+        If a number is not finite, the half-width is not in (0, 1] or |boost| > 3.
+    """
+
+    t0: float = 0.0
+    x0: float = 0.0
+    half_width: float
+    boost: float = 0.0
+
+    def __post_init__(self) -> None:
+        for name in ("t0", "x0", "half_width", "boost"):
+            value = getattr(self, name)
+            if isinstance(value, bool) or not isinstance(value, int | float):
+                raise refuse(f"region {name}", given=value, allowed="a number", do="give a number")
+            if not math.isfinite(value):
+                raise refuse(
+                    f"region {name}",
+                    given=value,
+                    allowed="a finite number",
+                    do="give a finite number",
+                )
+            object.__setattr__(self, name, float(value))
+        if not 0.0 < self.half_width <= 1.0:
+            raise refuse(
+                "region half_width",
+                given=self.half_width,
+                allowed="0 < half_width <= 1 (the patch has half-width 1)",
+                do="choose a smaller diamond",
+            )
+        if abs(self.boost) > 3.0:
+            raise refuse(
+                "region boost", given=self.boost, allowed="-3 <= boost <= 3", do="boost it less"
+            )
+
+    @property
+    def extent(self) -> Extent:
+        """Ranges in u and v."""
+        u0, v0 = (self.t0 + self.x0) * PATCH_EXTENT, (self.t0 - self.x0) * PATCH_EXTENT
+        du = self.half_width * math.exp(self.boost) * PATCH_EXTENT
+        dv = self.half_width * math.exp(-self.boost) * PATCH_EXTENT
+        return Extent(u0 - du, u0 + du, v0 - dv, v0 + dv)
+
+    @property
+    def area(self) -> float:
+        """Area du dv = 2 half_width**2, which a boost does not change."""
+        return 2.0 * self.half_width**2
+
+    @property
+    def reach(self) -> float:
+        """Distance in x from the centre to the left or right corner."""
+        return self.half_width * math.cosh(self.boost)
+
+    @property
+    def corners(self) -> tuple[tuple[float, float], ...]:
+        """(t, x) of the future, right, past and left corner."""
+        e = self.extent
+        pairs = (
+            (e.u_high, e.v_high),
+            (e.u_high, e.v_low),
+            (e.u_low, e.v_low),
+            (e.u_low, e.v_high),
+        )
+        return tuple(((u + v) * PATCH_EXTENT, (u - v) * PATCH_EXTENT) for u, v in pairs)
+
+
+def region_letter(index: int) -> str:
+    """Name of the region at `index` (0-based): A, B, C, ..."""
+    return "ABCDEFGH"[index]
+
+
+def _overshoot(region: Region) -> float:
+    """How far the region sticks out of the patch, in patch half-widths (<= 0: inside)."""
+    e = region.extent
+    return max(-e.u_low, e.u_high, -e.v_low, e.v_high) / PATCH_EXTENT - 1.0
+
+
+def _spacelike_gap(a: Region, b: Region) -> float:
+    """Smallest light-cone clearance between two regions, in half-widths (>= 0: spacelike)."""
+    ea, eb = a.extent, b.extent
+    a_left = min(eb.u_low - ea.u_high, ea.v_low - eb.v_high)
+    b_left = min(ea.u_low - eb.u_high, eb.v_low - ea.v_high)
+    return max(a_left, b_left) / PATCH_EXTENT
+
+
+def check_regions(regions: tuple[Region, ...]) -> None:
+    """Check that regions lie in the patch and are pairwise spacelike, touching allowed.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One to eight regions, in the order of their letters.
+
+    Raises
+    ------
+    InputError
+        Naming the regions, the offending number and the nearest allowed value.
+    """
+    if not 1 <= len(regions) <= MAX_REGIONS:
+        raise refuse(
+            "regions",
+            given=f"{len(regions)} regions",
+            allowed=f"1 to {MAX_REGIONS}",
+            do="change the number of regions",
+        )
+    for i, region in enumerate(regions):
+        over = _overshoot(region)
+        if over > SLACK:
+            raise _outside(i, region, over)
+    for (i, a), (j, b) in itertools.combinations(enumerate(regions), 2):
+        clearance = _spacelike_gap(a, b)
+        if clearance < -SLACK:
+            raise refuse(
+                f"regions {region_letter(i)} and {region_letter(j)}",
+                given=f"centres (t, x) = ({a.t0:g}, {a.x0:g}) and ({b.t0:g}, {b.x0:g}), which "
+                f"overlap or are not spacelike by {-clearance:.6g} patch half-widths",
+                allowed="regions that are spacelike to each other or touch",
+                do=f"move region {region_letter(j)} to {_nearest_x0(a, b)} or shrink one of them",
+            )
+
+
+def _outside(i: int, region: Region, over: float) -> InputError:
+    """Name the half-width that would fit with the same centre, or say that none does."""
+    fit = min(
+        (1.0 - abs(region.t0 + region.x0)) * math.exp(-region.boost),
+        (1.0 - abs(region.t0 - region.x0)) * math.exp(region.boost),
+    )
+    if fit > 0:
+        do = f"reduce its half_width from {region.half_width:g} to at most {fit:.6g}"
+    else:
+        do = "move its centre into the patch, |t0| + |x0| < 1"
+    return refuse(
+        f"region {region_letter(i)}",
+        given=f"a diamond that leaves the patch by {over:.6g} half-widths",
+        allowed="regions inside the patch |t| + |x| <= 1",
+        do=do,
+    )
+
+
+def _nearest_x0(a: Region, b: Region) -> str:
+    """The centre x0 of `b`, nearest to the present one, at which it just touches `a`."""
+    ea, eb = a.extent, b.extent
+    s = PATCH_EXTENT
+    right = b.x0 + max(ea.u_high - eb.u_low, eb.v_high - ea.v_low) / s
+    left = b.x0 - max(eb.u_high - ea.u_low, ea.v_high - eb.v_low) / s
+    x0 = right if b.x0 >= a.x0 else left
+    return f"x0 = {x0:.6g}"
+
+
+def equal_row(count: int, half_width: float, separation: float) -> tuple[Region, ...]:
+    """Equal diamonds in a row on t = 0, centred in the patch.
+
+    Parameters
+    ----------
+    count : int
+        Number of regions, 1 to 8.
+    half_width : float
+        Half-width of each, in patch half-widths.
+    separation : float
+        Gap between neighbouring corners on t = 0; 0 lets them touch.
+
+    Returns
+    -------
+    tuple of Region
+        From left to right.
+
+    Raises
+    ------
+    InputError
+        If the row does not fit, with the largest separation and half-width that do.
+    """
+    if isinstance(count, bool) or not isinstance(count, int) or not 1 <= count <= MAX_REGIONS:
+        raise refuse(
+            "region_count",
+            given=count,
+            allowed=f"a whole number from 1 to {MAX_REGIONS}",
+            do="change region_count",
+        )
+    if not math.isfinite(separation) or separation < 0:
+        raise refuse(
+            "separation",
+            given=separation,
+            allowed="a gap >= 0 in patch half-widths (0 = touching)",
+            do="raise separation",
+        )
+    first = Region(half_width=half_width)
+    width = count * 2 * first.half_width + (count - 1) * separation
+    if width > 2.0 + SLACK:
+        room = largest_separation(count, half_width)
+        way = f"lower separation to at most {room:.6g}, or " if count > 1 and room >= 0 else ""
+        raise refuse(
+            "the row of regions",
+            given=f"{count} regions of half-width {half_width:g} at separation {separation:g}, "
+            f"{width:.6g} wide",
+            allowed="a row at most 2 wide (the patch)",
+            do=f"{way}lower half_width to at most {largest_half_width(count, separation):.6g}",
+        )
+    step = 2 * first.half_width + separation
+    return tuple(replace(first, x0=(i - (count - 1) / 2) * step + 0.0) for i in range(count))
+
+
+def largest_separation(count: int, half_width: float) -> float:
+    """Largest gap at which `count` equal regions fit in a row (negative: none does)."""
+    return math.inf if count == 1 else (2.0 - 2.0 * count * half_width) / (count - 1)
+
+
+def largest_half_width(count: int, separation: float) -> float:
+    """Largest half-width at which `count` equal regions at this gap fit in a row."""
+    return (2.0 - (count - 1) * separation) / (2.0 * count)
+
+
+def gaps(regions: tuple[Region, ...]) -> tuple[float, ...]:
+    """Gaps in x between the neighbouring corners of regions taken from left to right."""
+    row = sorted(regions, key=lambda r: r.x0)
+    return tuple((b.x0 - b.reach) - (a.x0 + a.reach) for a, b in itertools.pairwise(row))
+
+
+def with_separation(regions: tuple[Region, ...], separation: float) -> tuple[Region, ...]:
+    """Scale the gaps of a list of regions so that their mean is `separation`.
+
+    Sizes, times, boosts, the order of the list and the middle of the whole row are kept.
+    Gaps whose mean is zero all become `separation`.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        At least two regions.
+    separation : float
+        Wanted mean gap, in patch half-widths, >= 0.
+
+    Returns
+    -------
+    tuple of Region
+        The moved regions, in the order given.
+
+    Raises
+    ------
+    InputError
+        If there is only one region or the separation is negative or not finite.
+    """
+    if len(regions) < 2:
+        raise refuse(
+            "separation", given=separation, allowed="two or more regions", do="add a region"
+        )
+    if not math.isfinite(separation) or separation < 0:
+        raise refuse(
+            "separation", given=separation, allowed="a mean gap >= 0", do="raise separation"
+        )
+    order = sorted(range(len(regions)), key=lambda i: regions[i].x0)
+    row = [regions[i] for i in order]
+    old = gaps(regions)
+    mean = sum(old) / len(old)
+    new = [g * separation / mean for g in old] if mean > SLACK else [separation] * len(old)
+    middle = (row[0].x0 - row[0].reach + row[-1].x0 + row[-1].reach) / 2
+    left = middle - (sum(new) + sum(2 * r.reach for r in row)) / 2
+    moved: dict[int, Region] = {}
+    for i, region, gap in zip(order, row, [*new, 0.0], strict=True):
+        moved[i] = replace(region, x0=left + region.reach)
+        left += 2 * region.reach + gap
+    return tuple(moved[i] for i in range(len(regions)))
+
+
+def largest_mean_gap(regions: tuple[Region, ...]) -> float:
+    """Largest mean gap of a list of regions that keeps them in the patch, by bisection.
+
+    0 for a single region.
+    """
+    if len(regions) < 2:
+        return 0.0
+    low, high = 0.0, 2.0
+    for _ in range(40):
+        middle = (low + high) / 2
+        try:
+            check_regions(with_separation(regions, middle))
+            low = middle
+        except InputError:
+            high = middle
+    return low * (1.0 - 1e-12)
+
+
+def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]:
+    """All distinct mirror images (x -> -x, t -> -t) of a set of regions, itself first.
+
+    A reflection keeps letters, so image i of region A is what A becomes; images whose sets of
+    diamonds coincide are equivalent only if each letter keeps its size, and are then left out.
+    """
+    images: list[tuple[Region, ...]] = []
+    seen: set[frozenset[tuple[float, float, float, float]]] = set()
+    for sx, st in ((1, 1), (-1, 1), (1, -1), (-1, -1)):
+        image = tuple(
+            Region(
+                t0=st * r.t0 + 0.0,
+                x0=sx * r.x0 + 0.0,
+                half_width=r.half_width,
+                boost=sx * st * r.boost + 0.0,
+            )
+            for r in regions
+        )
+        key = frozenset(
+            (round(r.t0, 12), round(r.x0, 12), round(r.half_width, 12), round(r.boost, 12))
+            for r in image
+        )
+        if key not in seen:
+            seen.add(key)
+            images.append(image)
+    return tuple(images)

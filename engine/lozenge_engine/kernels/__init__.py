@@ -1,0 +1,1 @@
+"""Pure numbers: arrays and frozen configurations in, arrays or named tuples out."""

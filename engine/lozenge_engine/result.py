@@ -1,0 +1,267 @@
+"""Finished numbers of one sprinkling, as values that explain themselves."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from lozenge_engine.config import Config
+from lozenge_engine.geometry import Region
+from lozenge_engine.kernels.modes import Certificate
+
+__all__ = ["Pair", "PatchSpectrum", "RegionResult", "Result", "Status", "Triple", "UnionResult"]
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+
+Status = Literal["ok", "refused", "undetermined", "out_of_range"]
+"""``refused``: rank makes S = 0 and no number is given; ``undetermined``: S depends on the
+kernel tolerance; ``out_of_range``: a symplectic value lies below 1/2 by more than rounding."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PatchSpectrum:
+    """Positive eigenvalues of i Delta on the whole patch that were found.
+
+    Parameters
+    ----------
+    eigenvalues : ndarray, shape (found,), float64
+        Descending, each counted once (the spectrum is symmetric).
+    kept : ndarray, shape (found,), bool
+        Which of them the first stage keeps.
+    cut : float
+        Threshold of the first stage; 0 for the rule ``none``.
+    nominal_modes : float
+        2 sqrt(N), the continuum count above the default threshold.
+    floor : float
+        Every eigenvalue above it was found, as far as the certificate says.
+    krylov_dimension : int
+        Dimension of the space searched; N on the dense route.
+    """
+
+    eigenvalues: FloatArray
+    kept: BoolArray
+    cut: float
+    nominal_modes: float
+    floor: float
+    krylov_dimension: int
+
+    @property
+    def kept_modes(self) -> int:
+        """Number of positive eigenvalues kept."""
+        return int(self.kept.sum())
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RegionResult:
+    """One region after both stages.
+
+    Parameters
+    ----------
+    region : Region
+        Its geometry.
+    elements : int
+        Elements inside, n.
+    eigenvalues : ndarray, shape (rank,), float64
+        Positive eigenvalues of the restricted operator, descending.
+    kept : ndarray, shape (rank,), bool
+        Which of them the second stage keeps.
+    cut : float
+        Threshold of the second stage.
+    nominal_modes : float
+        2 sqrt(n).
+    symplectic : ndarray, shape (kept,), float64
+        Symplectic values s >= 1/2, descending.
+    contributions : ndarray, shape (kept,), float64
+        What each of them adds to the entropy, in nats.
+    entropy : float
+        In nats; NaN when refused.
+    status : str
+        See `Status`.
+    note : str
+        The reason, when the status is not ``ok``; otherwise empty.
+    """
+
+    region: Region
+    elements: int
+    eigenvalues: FloatArray
+    kept: BoolArray
+    cut: float
+    nominal_modes: float
+    symplectic: FloatArray
+    contributions: FloatArray
+    entropy: float
+    status: Status = "ok"
+    note: str = ""
+
+    @property
+    def kept_modes(self) -> int:
+        """Number of positive eigenvalues kept."""
+        return int(self.kept.sum())
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class UnionResult:
+    """A union of regions under one of the two union rules.
+
+    `members` are indices of regions; the other fields read as those of `RegionResult`.
+    Under ``direct_sum`` the eigenvalues are those of the kept block, all of them kept.
+    """
+
+    rule: Literal["support", "direct_sum"]
+    members: tuple[int, ...]
+    eigenvalues: FloatArray
+    kept: BoolArray
+    symplectic: FloatArray
+    contributions: FloatArray
+    entropy: float
+    status: Status = "ok"
+    note: str = ""
+
+    @property
+    def kept_modes(self) -> int:
+        """Number of positive eigenvalues kept."""
+        return int(self.kept.sum())
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Pair:
+    """Mutual information of two regions, S_A + S_B - S_AB, in nats, under both union rules.
+
+    `cross_block` is the spectral norm of the commutator's block between the two kept spaces,
+    scaled by both diagonal blocks (0 would mean that the regions' kept modes commute).
+    """
+
+    a: int
+    b: int
+    gap: float
+    support: float
+    direct_sum: float
+    cross_block: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Triple:
+    """Tripartite information S_A + S_B + S_C - S_AB - S_BC - S_CA + S_ABC, in nats."""
+
+    members: tuple[int, int, int]
+    support: float
+    direct_sum: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Result:
+    """Everything computed on one sprinkling.
+
+    Parameters
+    ----------
+    config : Config
+        What was asked.
+    u, v : ndarray, shape (N,), float64
+        Light-cone coordinates of the elements, in the order of the point stream.
+    region_of : ndarray, shape (N,), int8
+        Index of the region that holds an element, -1 for none.
+    points_sha256 : str
+        Hash of the point set.
+    patch : PatchSpectrum
+        First stage.
+    certificate : Certificate
+        How far the patch modes can be trusted; every number rests on it.
+    regions : tuple of RegionResult
+        Second stage, in the order of the letters.
+    unions : mapping of str to UnionResult
+        Keys ``support`` and ``direct_sum``; empty for one region.
+    pairs, triples : tuple
+        All pairs; all neighbouring triples.
+    total_correlation : mapping of str to float
+        sum of S minus S of the union, per union rule; empty for one region.
+    seconds : mapping of str to float
+        Wall time of each stage, 0 where the cache served it.
+    versions : mapping of str to str
+        Of Python and the libraries.
+    """
+
+    config: Config
+    u: FloatArray
+    v: FloatArray
+    region_of: NDArray[np.int8]
+    points_sha256: str
+    patch: PatchSpectrum
+    certificate: Certificate
+    regions: tuple[RegionResult, ...]
+    unions: Mapping[str, UnionResult]
+    pairs: tuple[Pair, ...]
+    triples: tuple[Triple, ...]
+    total_correlation: Mapping[str, float]
+    seconds: Mapping[str, float]
+    versions: Mapping[str, str]
+
+    @property
+    def elements(self) -> int:
+        """Number of elements in the patch, N."""
+        return self.u.size
+
+    @property
+    def trusted(self) -> bool:
+        """Whether the certificate holds and no entropy carries a mark."""
+        marks = [r.status for r in self.regions] + [u.status for u in self.unions.values()]
+        return self.certificate.met and all(mark == "ok" for mark in marks)
+
+    def numbers(self) -> dict[str, Any]:
+        """The numbers as plain JSON values; what is not a number is null."""
+        return {
+            "elements": self.elements,
+            "points_sha256": self.points_sha256,
+            "patch_modes": self.patch.kept_modes,
+            "patch_nominal_modes": self.patch.nominal_modes,
+            "regions": [_region_numbers(r) for r in self.regions],
+            "union": {k: _union_numbers(u) for k, u in self.unions.items()} or None,
+            "mutual_information": [
+                {
+                    "a": p.a,
+                    "b": p.b,
+                    "gap": p.gap,
+                    "support": _plain(p.support),
+                    "direct_sum": _plain(p.direct_sum),
+                    "cross_block": _plain(p.cross_block),
+                }
+                for p in self.pairs
+            ],
+            "total_correlation": {k: _plain(x) for k, x in self.total_correlation.items()} or None,
+            "tripartite_information": [
+                {
+                    "members": list(t.members),
+                    "support": _plain(t.support),
+                    "direct_sum": _plain(t.direct_sum),
+                }
+                for t in self.triples
+            ],
+            "certificate": self.certificate.as_json(),
+        }
+
+
+def _plain(x: float) -> float | None:
+    return float(x) if math.isfinite(x) else None
+
+
+def _region_numbers(r: RegionResult) -> dict[str, Any]:
+    return {
+        "t0": r.region.t0,
+        "x0": r.region.x0,
+        "half_width": r.region.half_width,
+        "boost": r.region.boost,
+        "elements": r.elements,
+        "kept_modes": r.kept_modes,
+        "nominal_modes": r.nominal_modes,
+        "entropy": _plain(r.entropy),
+        "status": r.status,
+    }
+
+
+def _union_numbers(u: UnionResult) -> dict[str, Any]:
+    return {"kept_modes": u.kept_modes, "entropy": _plain(u.entropy), "status": u.status}

@@ -1,0 +1,73 @@
+"""A cache of stage outputs, shared by the computations of one process."""
+
+from __future__ import annotations
+
+import threading
+from collections import OrderedDict
+from collections.abc import Callable, Hashable
+from typing import Any, TypeVar
+
+import numpy as np
+
+__all__ = ["Stages"]
+
+T = TypeVar("T")
+
+
+class Stages:
+    """Least-recently-used cache of stage outputs, limited in bytes.
+
+    A key names everything that its value depends on, so that entries never go stale.
+
+    Parameters
+    ----------
+    limit_bytes : int
+        Arrays kept, at most; the newest entry always stays.
+    compiled : bool
+        Whether compiled loops may be used where the result is the same to the bit; set it once
+        `lozenge_engine.kernels.order.warm` has returned.
+    """
+
+    def __init__(self, *, limit_bytes: int = 1_500_000_000, compiled: bool = False) -> None:
+        self.limit_bytes = limit_bytes
+        self.compiled = compiled
+        self._entries: OrderedDict[Hashable, tuple[Any, int]] = OrderedDict()
+        self._lock = threading.Lock()
+
+    def get(self, key: Hashable, make: Callable[[], T]) -> tuple[T, bool]:
+        """Value of a key, made if it is missing, and whether the cache served it.
+
+        Two threads may make the same value at once; both get an equal one.
+        """
+        with self._lock:
+            if key in self._entries:
+                self._entries.move_to_end(key)
+                value: T = self._entries[key][0]
+                return value, True
+        value = make()
+        self.put(key, value)
+        return value, False
+
+    def put(self, key: Hashable, value: object) -> None:
+        """Store a value, dropping the least recently used ones beyond the limit."""
+        with self._lock:
+            self._entries[key] = (value, _array_bytes(value))
+            self._entries.move_to_end(key)
+            total = sum(size for _, size in self._entries.values())
+            while total > self.limit_bytes and len(self._entries) > 1:
+                total -= self._entries.popitem(last=False)[1][1]
+
+    def peek(self, key: Hashable) -> Any | None:
+        """Value of a key, or None."""
+        with self._lock:
+            entry = self._entries.get(key)
+            return None if entry is None else entry[0]
+
+
+def _array_bytes(value: object) -> int:
+    """Bytes of the arrays in nested tuples."""
+    if isinstance(value, np.ndarray):
+        return value.nbytes
+    if isinstance(value, tuple):
+        return sum(_array_bytes(part) for part in value)
+    return 64
