@@ -20,6 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.config import Config
+from lozenge_engine.cost import Prediction, predict
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import Region, gaps
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
@@ -31,7 +32,15 @@ from lozenge_engine.result import Pair, PatchSpectrum, RegionResult, Result, Tri
 from lozenge_engine.stages import Stages
 from lozenge_engine.threads import blas_threads
 
-__all__ = ["DENSE_LIMIT", "compute", "versions"]
+__all__ = [
+    "DENSE_LIMIT",
+    "UNION_RULES",
+    "Prediction",
+    "UnionRule",
+    "compute",
+    "predict",
+    "versions",
+]
 
 FloatArray = NDArray[np.float64]
 Report = Callable[[str, float], None]

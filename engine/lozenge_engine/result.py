@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -11,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.config import Config
-from lozenge_engine.geometry import Region
+from lozenge_engine.geometry import Region, region_letter
 from lozenge_engine.kernels.modes import Certificate
 
 __all__ = ["Pair", "PatchSpectrum", "RegionResult", "Result", "Status", "Triple", "UnionResult"]
@@ -154,7 +155,7 @@ class Triple:
     direct_sum: float
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, repr=False)
 class Result:
     """Everything computed on one sprinkling.
 
@@ -211,6 +212,39 @@ class Result:
         """Whether the certificate holds and no entropy carries a mark."""
         marks = [r.status for r in self.regions] + [u.status for u in self.unions.values()]
         return self.certificate.met and all(mark == "ok" for mark in marks)
+
+    def _rows(self) -> list[tuple[str, str, str]]:
+        """Name, value and kept over nominal modes of what a reader asks for first."""
+        rows = [
+            (
+                f"S({region_letter(k)})",
+                f"{r.entropy:.4f}" if r.status == "ok" else f"{r.entropy:.4f} ({r.status})",
+                f"{r.kept_modes} of {r.nominal_modes:.1f} modes, {r.elements} elements",
+            )
+            for k, r in enumerate(self.regions)
+        ]
+        for rule, union in self.unions.items():
+            rows.append((f"S(union, {rule})", f"{union.entropy:.4f}", f"{union.kept_modes} modes"))
+        for p in self.pairs:
+            name = f"I({region_letter(p.a)}:{region_letter(p.b)})"
+            rows.append((name, f"{p.support:.4f}", f"by support; {p.direct_sum:.4f} direct sum"))
+        return rows
+
+    def __repr__(self) -> str:
+        """One sprinkling's entropies in nats; their scatter between sprinklings is not in it."""
+        head = f"Result of {self.elements} elements, one sprinkling, entropies in nats"
+        mark = "" if self.certificate.met else " (certificate not met)"
+        body = "".join(f"\n  {name:<20}{value:>10}   {more}" for name, value, more in self._rows())
+        return head + mark + body
+
+    def _repr_html_(self) -> str:
+        """The same as a table."""
+        rows = "".join(
+            "<tr>" + "".join(f"<td>{html.escape(cell)}</td>" for cell in row) + "</tr>"
+            for row in self._rows()
+        )
+        caption = html.escape(repr(self).split("\n", 1)[0])
+        return f"<table><caption>{caption}</caption>{rows}</table>"
 
     def numbers(self) -> dict[str, Any]:
         """The numbers as plain JSON values; what is not a number is null."""

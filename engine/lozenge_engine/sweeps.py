@@ -142,6 +142,12 @@ class ScalingCurve:
     planned: int
     left_out: tuple[str, ...] = ()
 
+    @property
+    def window(self) -> tuple[float, float] | None:
+        """Expected elements of the smallest region at the ends of the fit; None without points."""
+        inside = self.elements_per_region[self.used]
+        return (float(inside.min()), float(inside.max())) if inside.size else None
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SeparationCurve:

@@ -27,6 +27,7 @@ __all__ = [
     "residual_goal",
     "ritz_values",
     "settled",
+    "start_vector",
 ]
 
 FloatArray = NDArray[np.float64]
@@ -50,7 +51,7 @@ class Space(NamedTuple):
     exhausted: bool
 
 
-def _start_vector(n: int, seed: int) -> FloatArray:
+def start_vector(n: int, seed: int) -> FloatArray:
     """Deterministic vector with entries uniform in (-1/2, 1/2), from raw 64-bit output."""
     raw = np.random.PCG64(np.random.SeedSequence([seed, 0x4B52])).random_raw(n)
     return np.asarray((raw >> np.uint64(11)) * 2.0**-53 - 0.5, dtype=np.float64)
@@ -68,7 +69,7 @@ def _orthogonalised(x: FloatArray, *blocks: FloatArray) -> FloatArray:
 def begin(n: int, deflate: FloatArray, *, capacity: int, seed: int) -> Space:
     """Space of dimension 1 from a fresh vector."""
     basis = np.empty((n, capacity), order="F")
-    basis[:, 0] = _orthogonalised(_start_vector(n, seed), deflate)
+    basis[:, 0] = _orthogonalised(start_vector(n, seed), deflate)
     return Space(basis, np.zeros(capacity), 1, exhausted=False)
 
 

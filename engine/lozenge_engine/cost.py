@@ -1,0 +1,190 @@
+"""What a computation will take: seconds and bytes, from the kernels' own cost formulas.
+
+The formulas count flops and applications of the operator; how fast this machine does either is
+measured once, at first use, in about 0.2 s, and corrected by every computation that follows.
+"""
+
+from __future__ import annotations
+
+import functools
+import math
+import time
+from typing import NamedTuple
+
+import numpy as np
+
+from lozenge_engine.config import Config
+from lozenge_engine.geometry import PATCH_AREA
+from lozenge_engine.kernels import cuts, modes
+from lozenge_engine.kernels.order import MasslessCommutator
+from lozenge_engine.kernels.points import sprinkle
+
+__all__ = ["CostModel", "Prediction", "predict", "shared_model"]
+
+CACHED_BYTES = 32e6
+"""Bases up to this size stay in the processor's cache."""
+BASE_BYTES = 250e6
+"""The interpreter with the engine loaded."""
+
+
+class Prediction(NamedTuple):
+    """Expected wall time and peak memory.
+
+    Attributes
+    ----------
+    seconds : float
+        For the seed's own sprinkling, nothing cached.
+    peak_bytes : float
+        Including the interpreter.
+    """
+
+    seconds: float
+    peak_bytes: float
+
+
+class _Work(NamedTuple):
+    """Counted work of one computation."""
+
+    elements: float
+    dimension: float
+    flops: float
+    applications: float
+    basis_bytes: float
+    peak_bytes: float
+
+
+def _counted(config: Config) -> _Work:
+    """Leading costs of `find_modes`, `certify` and the second stage."""
+    n = PATCH_AREA * config.points.density
+    floor = cuts.needed_floor(config.patch_rule, elements=round(n))
+    if floor == 0.0:
+        return _Work(n, n, 9.0 * n**3, n, 16.0 * n**2, 48.0 * n**2 + BASE_BYTES)
+    r = min(n / 2, n / (2 * math.pi * floor))
+    m = min(n, modes.RATIO * r + 24)
+    search = 2 * n * m**2 + 2 * n * m * r + 256 * n * m
+    check = 2 * n * (m / 4) * (2 * r) + n * m**2 / 8 + 4 * n * r**2
+    inside = sum(region.area for region in config.regions) * config.points.density
+    second = 8 * inside * r**2 + 300.0 * (len(config.regions) + 1) ** 2 * min(r, inside) ** 3 / 4
+    basis = 8 * n * m
+    return _Work(
+        n,
+        m,
+        search + check + second,
+        1.25 * m + 2 * r,
+        basis,
+        1.1 * basis + 16 * n * r + BASE_BYTES,
+    )
+
+
+class CostModel:
+    """Speed of this machine, measured once and corrected by what computations took."""
+
+    def __init__(self) -> None:
+        self._rates: tuple[float, float] | None = None
+        self._correction: dict[int, float] = {}
+
+    def _calibrated(self) -> tuple[float, float]:
+        """Flops per second with the basis in cache, and out of it."""
+        if self._rates is None:
+            self._rates = (_rate_in_cache(), _rate_in_memory())
+        return self._rates
+
+    def predict(self, config: Config) -> Prediction:
+        """Predict a computation.
+
+        Parameters
+        ----------
+        config : Config
+            What would be computed.
+
+        Returns
+        -------
+        Prediction
+            Good to about 30 % once a computation of similar size has been seen.
+        """
+        work = _counted(config)
+        seconds = self._raw(config, work) * self._correction.get(_size_class(work), 1.0)
+        return Prediction(seconds, work.peak_bytes)
+
+    def _raw(self, config: Config, work: _Work) -> float:
+        """Seconds before correction."""
+        cached, memory = self._calibrated()
+        rate = cached if work.basis_bytes < CACHED_BYTES else min(cached, memory)
+        per_element = 2.0e-8 if config.mass == 0 else 1.5e-8 * math.log2(work.elements)
+        calls = 4e-5 * work.applications
+        return work.flops / rate + per_element * work.elements * work.applications + calls
+
+    def learn(self, config: Config, seconds: float) -> float:
+        """Take into account what a computation took.
+
+        Parameters
+        ----------
+        config : Config
+            What was computed, with nothing cached.
+        seconds : float
+            Its wall time.
+
+        Returns
+        -------
+        float
+            Actual over predicted time.
+        """
+        work = _counted(config)
+        ratio = seconds / self.predict(config).seconds
+        old = self._correction.get(_size_class(work), 1.0)
+        self._correction[_size_class(work)] = old * math.sqrt(ratio)
+        return ratio
+
+
+def _size_class(work: _Work) -> int:
+    """Sizes within a factor of two share a correction."""
+    return round(math.log2(max(work.elements, 1.0)))
+
+
+def _rate_in_cache() -> float:
+    """Effective flop rate of the whole search on a small set."""
+    points = sprinkle(density=600, seed=0, fixed=True)
+    operator = MasslessCommutator(points.u, points.v)
+    floor = math.sqrt(operator.size) / (4 * math.pi)
+    best = math.inf
+    for _ in range(2):
+        start = time.perf_counter()
+        found = modes.find_modes(operator, floor=floor)
+        best = min(best, time.perf_counter() - start)
+    n, m, r = operator.size, found.dimension, found.values.size
+    best -= 1.25e-4 * m  # calls, counted apart
+    return max(1e8, (2 * n * m**2 + 2 * n * m * r + 256 * n * m) / max(best, 1e-3))
+
+
+def _rate_in_memory() -> float:
+    """Flop rate of a panel of 9 against a basis that does not fit in cache."""
+    basis = np.ones((100_000, 64), order="F")
+    panel = np.ones((100_000, 9), order="F")
+    best = math.inf
+    for _ in range(3):
+        start = time.perf_counter()
+        panel - basis @ (basis.T @ panel)
+        best = min(best, time.perf_counter() - start)
+    return 4.0 * basis.size * panel.shape[1] / best
+
+
+@functools.cache
+def shared_model() -> CostModel:
+    """The cost model of this process."""
+    return CostModel()
+
+
+def predict(config: Config) -> Prediction:
+    """Predict a computation with the model of this process; see `CostModel.predict`.
+
+    Parameters
+    ----------
+    config : Config
+        What would be computed.
+
+    Returns
+    -------
+    Prediction
+        Seconds and bytes.
+    """
+    return shared_model().predict(config)
