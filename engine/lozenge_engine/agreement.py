@@ -12,7 +12,7 @@ from lozenge_engine.geometry import region_letter
 if TYPE_CHECKING:
     from lozenge_engine.result import Result
 
-__all__ = ["TOLERANCE", "Agreement", "Sender", "compare_numbers"]
+__all__ = ["TOLERANCE", "Agreement", "Sender", "compare_numbers", "plain"]
 
 TOLERANCE = 1e-9
 """Entropies of the same points that differ by less are equal: what rounding may do on another
@@ -44,8 +44,8 @@ class Sender:
     Parameters
     ----------
     numbers : mapping
-        `Result.numbers()`; its hash of the points is held in `points_sha256` alone, and what is
-        not finite becomes None.
+        `Result.numbers()`.  Its hash of the points is held in `points_sha256` alone, its
+        certificate is reduced to the verdict, and what is not finite becomes None.
     points_sha256 : str
         Hash of the sender's point set.
     versions : mapping of str to str
@@ -57,13 +57,26 @@ class Sender:
     versions: Mapping[str, str]
 
     def __post_init__(self) -> None:
-        numbers = {k: _plain(v) for k, v in self.numbers.items() if k != "points_sha256"}
+        numbers = {k: plain(v) for k, v in self.numbers.items() if k != "points_sha256"}
+        verdict = numbers["certificate"]
+        numbers["certificate"] = {"met": verdict["met"], "reasons": verdict.get("reasons", [])}
         object.__setattr__(self, "numbers", numbers)
         object.__setattr__(self, "versions", dict(self.versions))
 
     @classmethod
     def of(cls, result: Result) -> Sender:
-        """Take the numbers of a finished result."""
+        """Take the numbers of a finished result.
+
+        Parameters
+        ----------
+        result : Result
+            What was computed from the preset.
+
+        Returns
+        -------
+        Sender
+            The numbers to send.
+        """
         return cls(
             numbers=result.numbers(),
             points_sha256=result.points_sha256,
@@ -71,12 +84,23 @@ class Sender:
         )
 
 
-def _plain(value: Any) -> Any:
-    """A JSON value in which what is not finite is null."""
+def plain(value: Any) -> Any:
+    """Turn numbers into a JSON value in which what is not finite is null.
+
+    Parameters
+    ----------
+    value : mapping, sequence, str, int, float, bool or None
+        Nested as deep as it comes.
+
+    Returns
+    -------
+    dict, list, str, int, float, bool or None
+        The same with plain containers.
+    """
     if isinstance(value, Mapping):
-        return {k: _plain(v) for k, v in value.items()}
+        return {k: plain(v) for k, v in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(v) for v in value]
+        return [plain(v) for v in value]
     return None if isinstance(value, float) and not math.isfinite(value) else value
 
 

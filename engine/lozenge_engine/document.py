@@ -63,7 +63,18 @@ def path_text(path: Iterable[Key]) -> str:
 
 
 def shown(value: object) -> str:
-    """Write a value of a document as JSON on one line of at most 60 characters."""
+    """Write a value of a document as JSON on one short line.
+
+    Parameters
+    ----------
+    value : object
+        What was found in a document.
+
+    Returns
+    -------
+    str
+        At most 60 ASCII characters.
+    """
     text = json.dumps(value, ensure_ascii=True, default=repr)
     return text if len(text) <= 60 else text[:57] + "..."
 

@@ -19,6 +19,7 @@ from typing import Any, Literal, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from lozenge_engine import __version__
 from lozenge_engine.config import Config
 from lozenge_engine.cost import Prediction, predict
 from lozenge_engine.errors import refuse
@@ -432,5 +433,5 @@ def versions() -> dict[str, str]:
     return {
         "python": platform.python_version(),
         **{name: metadata.version(name) for name in ("numpy", "scipy")},
-        "lozenge": metadata.version("lozenge"),
+        "lozenge": __version__,
     }

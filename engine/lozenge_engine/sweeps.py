@@ -85,6 +85,8 @@ class Average:
         Entropy of all regions together, per union rule; empty for one region.
     pairs : tuple of PairEstimate
         Every pair.
+    total_correlation : mapping of str to Estimate
+        Sum of the regions' entropies minus the union's, per union rule; empty for one region.
     trusted : bool
         Whether every reading is trusted.
     """
@@ -96,6 +98,7 @@ class Average:
     regions: tuple[Estimate, ...]
     unions: Mapping[str, Estimate]
     pairs: tuple[PairEstimate, ...]
+    total_correlation: Mapping[str, Estimate]
     trusted: bool
 
 
@@ -239,6 +242,19 @@ def average(setup: Setup, readings: Readings) -> Average:
             )
             for i, (a, b) in enumerate(pairs)
         ),
+        total_correlation={
+            rule: estimate(
+                np.array(
+                    [
+                        np.mean([r.entropy.sum() - getattr(r, f"union_{rule}") for r in row])
+                        for row in rows
+                    ]
+                )
+            )
+            for rule in UNION_RULES
+        }
+        if count > 1
+        else {},
         trusted=all(reading.trusted for row in rows for reading in row),
     )
 
