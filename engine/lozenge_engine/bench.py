@@ -26,6 +26,8 @@ from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import (
     MAX_REGIONS,
     PATCH_AREA,
+    Region,
+    gaps,
     largest_half_width,
     largest_mean_gap,
     largest_separation,
@@ -192,6 +194,9 @@ class Bench(param.Parameterized):
         self._stages = Stages()
         self._settled: dict[str, Any] = {}
         self._quiet = True
+        both = "elements" in values and "density" in values
+        if both and values["elements"] != PATCH_AREA * values["density"]:
+            raise _disagree(values["elements"], values["density"])
         if "elements" in values and "density" not in values:
             values["density"] = values["elements"] / PATCH_AREA
         values["elements"] = values.get("density", type(self).density) * PATCH_AREA
@@ -204,6 +209,16 @@ class Bench(param.Parameterized):
         self._settled = self._values()
         self._quiet = False
         self.setup()
+
+    def __setattr__(self, name: str, value: Any) -> None:
+        """Set a parameter; when its own bounds refuse it, undo a half-done update as well."""
+        try:
+            super().__setattr__(name, value)
+        except ValueError:
+            if not getattr(self, "_quiet", True):
+                with self._silent(), param.parameterized.discard_events(self):
+                    self.param.update(**self._settled)
+            raise
 
     def _values(self) -> dict[str, Any]:
         """All parameters but the name."""
@@ -218,11 +233,16 @@ class Bench(param.Parameterized):
 
     def _use_list(self, regions: Any, *, separation: float | None) -> None:
         """Take a list of regions; without a separation theirs is the mean gap."""
-        self.regions = regions
-        if separation is None:
-            gap = self.setup().list_separation()
-            if gap is not None:
-                self.separation = gap
+        if not isinstance(regions, list | tuple) or not all(
+            isinstance(region, Region) for region in regions
+        ):
+            raise refuse(
+                "regions", given=regions, allowed="None or a list of Region", do="give such a list"
+            )
+        self.regions = tuple(regions)
+        if separation is None and len(regions) > 1:
+            old = gaps(self.regions)
+            self.separation = max(0.0, sum(old) / len(old))
 
     @contextmanager
     def _silent(self) -> Iterator[None]:
@@ -258,26 +278,33 @@ class Bench(param.Parameterized):
         if self._quiet:
             return
         before = self._settled
-        try:
-            with self._silent(), param.parameterized.batch_call_watchers(self):
-                if self.elements != before["elements"] and self.density == before["density"]:
+        # Watchers run when the batch ends, after the check: they never see what is refused.
+        with param.parameterized.batch_call_watchers(self), self._silent():
+            try:
+                if self.kind == "file" and before["kind"] != "file" and self._file is not None:
+                    self._use_file(self._file)
+                elif self.elements != before["elements"] and self.density == before["density"]:
                     self.density = self.elements / PATCH_AREA
                 elif self.elements != self.density * PATCH_AREA:
+                    if self.elements != before["elements"]:
+                        raise _disagree(self.elements, self.density)
                     self.elements = self.density * PATCH_AREA
                 if self.regions is not before["regions"] and self.regions is not None:
                     given = self.separation != before["separation"]
                     self._use_list(self.regions, separation=self.separation if given else None)
                 self._refuse_idle(before)
-            self.setup()
-        except (InputError, ValueError):
-            with self._silent():
+                self.setup()
+            except ValueError:
                 self.param.update(**before)
-            raise
-        self._settled = self._values()
+                raise
+            self._settled = self._values()
 
     def _refuse_idle(self, before: dict[str, Any]) -> None:
         """Refuse a change of a parameter that would be silently without effect."""
+        coming_back = self.kind == "file" and before["kind"] != "file"
         for name, reason in self._idle().items():
+            if coming_back and name in ("density", "elements"):
+                continue
             if name in before and getattr(self, name) != before[name]:
                 raise refuse(
                     name,
@@ -302,6 +329,9 @@ class Bench(param.Parameterized):
             reasons["alpha"] = (
                 "nothing is cut" if mode == "none" else "each stage has its own alpha"
             )
+        if mode != "custom":
+            for name in ("patch_rule", "region_rule"):
+                reasons[name] = "only the mode custom uses it"
         if mode != "fixed_number":
             reasons["number"] = "only the mode fixed_number uses it"
         return reasons
@@ -357,17 +387,24 @@ class Bench(param.Parameterized):
                 allowed="that file, with the same points",
                 do=f"load {source.file} first",
             )
+        before, file_before = self._settled, self._file
         self._file = file if source.kind == "file" else self._file
-        with self._silent():
-            self.param.update(
-                density=source.density,
-                elements=source.density * PATCH_AREA,
-                seed=source.seed,
-                kind=source.kind,
-                regions=setup.region_list,
-                sprinklings=setup.averaging.sprinklings,
-                **{name: getattr(setup, name) for name in self._MIRRORED},
-            )
+        try:
+            with self._silent():
+                self.param.update(
+                    density=source.density,
+                    elements=source.density * PATCH_AREA,
+                    seed=source.seed,
+                    kind=source.kind,
+                    regions=setup.region_list,
+                    sprinklings=setup.averaging.sprinklings,
+                    **{name: getattr(setup, name) for name in self._MIRRORED},
+                )
+        except ValueError:
+            self._file = file_before
+            with self._silent():
+                self.param.update(**before)
+            raise
         self._settled = self._values()
 
     @property
@@ -466,6 +503,16 @@ class Bench(param.Parameterized):
         return (
             f"<table><tr><th>parameter</th><th>value</th><th>no effect now</th></tr>{rows}</table>"
         )
+
+
+def _disagree(elements: float, density: float) -> InputError:
+    """Elements and density were both given and do not fit together."""
+    return refuse(
+        "elements",
+        given=f"{elements:g} with density {density:g}",
+        allowed="elements = 2 density",
+        do="give one of the two",
+    )
 
 
 def _fits(count: int, half_width: float, separation: float) -> bool:

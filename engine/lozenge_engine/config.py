@@ -16,6 +16,7 @@ from typing import Any, Literal
 
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import (
+    MAX_REGIONS,
     PATCH_AREA,
     Region,
     check_regions,
@@ -64,7 +65,7 @@ def _number(where: str, value: object, *, low: float, high: float, allowed: str)
         or not low <= value <= high
     ):
         raise refuse(where, given=value, allowed=allowed, do=f"change {where}")
-    return float(value)
+    return float(value) + 0.0  # no -0.0
 
 
 def _whole(where: str, value: object, *, low: int, high: int) -> int:
@@ -223,6 +224,7 @@ class Config:
             allowed=f"0 to 0.3 sqrt(density) = {high:.6g} inverse half-widths",
         )
         object.__setattr__(self, "mass", mass)
+        object.__setattr__(self, "regions", tuple(self.regions))
         check_regions(self.regions)
         if self.patch_rule.kind in ("union_count", "equal_share"):
             raise refuse(
@@ -361,6 +363,12 @@ class Setup:
                 allowed=", ".join((*MODES, "custom")),
                 do="choose one of them",
             )
+        # Also what is idle now: it is kept, and acts when a control is turned back.
+        _whole("region_count", self.region_count, low=1, high=MAX_REGIONS)
+        _number("half_width", self.half_width, low=1e-9, high=1.0, allowed="0 < half_width <= 1")
+        _number("separation", self.separation, low=0.0, high=2.0, allowed="0 to 2 half-widths")
+        _number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
+        _whole("number", self.number, low=1, high=100_000)
         self.config()
 
     def regions(self) -> tuple[Region, ...]:

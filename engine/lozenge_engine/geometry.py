@@ -83,7 +83,7 @@ class Region:
                     allowed="a finite number",
                     do="give a finite number",
                 )
-            object.__setattr__(self, name, float(value))
+            object.__setattr__(self, name, float(value) + 0.0)  # no -0.0
         if not 0.0 < self.half_width <= 1.0:
             raise refuse(
                 "region half_width",
@@ -178,7 +178,7 @@ def check_regions(regions: tuple[Region, ...]) -> None:
                 given=f"centres (t, x) = ({a.t0:g}, {a.x0:g}) and ({b.t0:g}, {b.x0:g}), which "
                 f"overlap or are not spacelike by {-clearance:.6g} patch half-widths",
                 allowed="regions that are spacelike to each other or touch",
-                do=f"move region {region_letter(j)} to {_nearest_x0(a, b)} or shrink one of them",
+                do=f"{_way_out(j, a, b)}shrink one of them",
             )
 
 
@@ -189,7 +189,7 @@ def _outside(i: int, region: Region, over: float) -> InputError:
         (1.0 - abs(region.t0 - region.x0)) * math.exp(region.boost),
     )
     if fit > 0:
-        do = f"reduce its half_width from {region.half_width:g} to at most {fit:.6g}"
+        do = f"reduce its half_width from {region.half_width:g} to at most {_at_most(fit)}"
     else:
         do = "move its centre into the patch, |t0| + |x0| < 1"
     return refuse(
@@ -200,14 +200,23 @@ def _outside(i: int, region: Region, over: float) -> InputError:
     )
 
 
-def _nearest_x0(a: Region, b: Region) -> str:
-    """The centre x0 of `b`, nearest to the present one, at which it just touches `a`."""
+def _at_most(value: float) -> str:
+    """Six digits of a number > 0, rounded down so that what is named is allowed."""
+    unit = 10.0 ** (math.floor(math.log10(value)) - 5)
+    return f"{math.floor(value / unit) * unit:.6g}"
+
+
+def _way_out(j: int, a: Region, b: Region) -> str:
+    """Where region `b` just touches `a`, nearest to its present place, if that is in the patch."""
     ea, eb = a.extent, b.extent
     s = PATCH_EXTENT
     right = b.x0 + max(ea.u_high - eb.u_low, eb.v_high - ea.v_low) / s
     left = b.x0 - max(eb.u_high - ea.u_low, ea.v_high - eb.v_low) / s
-    x0 = right if b.x0 >= a.x0 else left
-    return f"x0 = {x0:.6g}"
+    places = (math.ceil(right * 1e6) / 1e6, math.floor(left * 1e6) / 1e6)
+    for x0 in sorted(places, key=lambda x: abs(x - b.x0)):
+        if _overshoot(replace(b, x0=x0)) <= SLACK:
+            return f"move region {region_letter(j)} to x0 = {x0:.6g} or "
+    return ""
 
 
 def equal_row(count: int, half_width: float, separation: float) -> tuple[Region, ...]:
@@ -250,13 +259,18 @@ def equal_row(count: int, half_width: float, separation: float) -> tuple[Region,
     width = count * 2 * first.half_width + (count - 1) * separation
     if width > 2.0 + SLACK:
         room = largest_separation(count, half_width)
-        way = f"lower separation to at most {room:.6g}, or " if count > 1 and room >= 0 else ""
+        most = largest_half_width(count, separation)
+        ways = []
+        if count > 1 and room >= 0:
+            ways.append(f"lower separation to at most {_at_most(room) if room > 0 else 0}")
+        if most > 0:
+            ways.append(f"lower half_width to at most {_at_most(most)}")
         raise refuse(
             "the row of regions",
             given=f"{count} regions of half-width {half_width:g} at separation {separation:g}, "
             f"{width:.6g} wide",
             allowed="a row at most 2 wide (the patch)",
-            do=f"{way}lower half_width to at most {largest_half_width(count, separation):.6g}",
+            do=", or ".join(ways) or "lower both",
         )
     step = 2 * first.half_width + separation
     return tuple(replace(first, x0=(i - (count - 1) / 2) * step + 0.0) for i in range(count))
@@ -330,7 +344,8 @@ def largest_mean_gap(regions: tuple[Region, ...]) -> float:
     """
     if len(regions) < 2:
         return 0.0
-    low, high = 0.0, 2.0
+    # The present gap fits; regions at different times may need one, so 0 need not fit.
+    low, high = max(0.0, sum(gaps(regions)) / (len(regions) - 1)), 2.0
     for _ in range(40):
         middle = (low + high) / 2
         try:

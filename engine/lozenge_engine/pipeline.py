@@ -7,6 +7,7 @@ patch's modes.
 
 from __future__ import annotations
 
+import hashlib
 import itertools
 import os
 import platform
@@ -23,13 +24,21 @@ from lozenge_engine import __version__
 from lozenge_engine.config import Config
 from lozenge_engine.cost import Prediction, predict
 from lozenge_engine.errors import refuse
-from lozenge_engine.geometry import Region, gaps
+from lozenge_engine.geometry import PATCH_AREA, Region, gaps
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
 from lozenge_engine.kernels.order import Commutator, MassiveCommutator, MasslessCommutator
 from lozenge_engine.kernels.points import Coordinates, membership, points_hash, sprinkle
 from lozenge_engine.pointfile import PointFile
 from lozenge_engine.readout import Measured, read
-from lozenge_engine.result import Pair, PatchSpectrum, RegionResult, Result, Triple, UnionResult
+from lozenge_engine.result import (
+    Pair,
+    PatchSpectrum,
+    RegionResult,
+    Result,
+    Status,
+    Triple,
+    UnionResult,
+)
 from lozenge_engine.stages import Stages
 from lozenge_engine.threads import blas_threads
 
@@ -143,6 +152,13 @@ class _Computation:
                     allowed=f"the points of {source.file} with hash {str(source.sha256)[:12]}",
                     do="load that file",
                 )
+            if source.density != file.points.u.size / PATCH_AREA:
+                raise refuse(
+                    "density",
+                    given=source.density,
+                    allowed=f"N/2 = {file.points.u.size / PATCH_AREA:g} for imported points",
+                    do="leave the density to the points",
+                )
             self.points_key: tuple[Any, ...] = ("file", file.sha256)
         else:
             self.points_key = (source.kind, source.density, source.seed, config.realisation)
@@ -236,9 +252,11 @@ class _Computation:
         """The patch's modes down to what the rule needs, extended if the cache holds fewer."""
         rule, n = self.config.patch_rule, operator.size
         floor = cuts.needed_floor(rule, elements=n)
+        if rule.kind == "fixed_number" and rule.number > n // 8:
+            floor = 0.0  # deep in the spectrum a search costs more than all modes
         while True:
             found, certificate = self._modes(operator, floor)
-            if rule.kind != "fixed_number" or found.values.size > rule.number or floor < 1e-9 * n:
+            if rule.kind != "fixed_number" or found.values.size > rule.number or floor == 0.0:
                 break
             floor *= 0.8
         cut = cuts.threshold(rule, own=n, union=n, regions=1)
@@ -284,7 +302,10 @@ class _Computation:
             factor = gaussian.restricted(kept, patch.modes.vectors, rows)
             return gaussian.restricted_spectrum(gaussian.compressed(factor))
 
-        key = ("restriction", *self.points_key, self.config.mass, kept.size, region)
+        # Factors of several regions are stacked, so they have to be in one basis: the phases of
+        # the modes are free, and differ between the dense route and the searches.
+        basis = hashlib.sha256(patch.modes.vectors[:4, : 2 * kept.size].tobytes()).digest()
+        key = ("restriction", *self.points_key, self.config.mass, kept.size, region, basis)
         return self.stages.get(key, make)[0]
 
     def _block(
@@ -312,6 +333,7 @@ class _Numbers:
         self.blocks = blocks
         self.elements = elements
         self.rank = 2 * int(patch.kept.sum()) if config.patch_rule.kind != "none" else None
+        self._singles: dict[int, Measured] = {}
         self._unions: dict[tuple[int, ...], dict[str, UnionResult]] = {}
 
     def _read(
@@ -338,10 +360,10 @@ class _Numbers:
                 kept=block.kept,
                 cut=block.cut,
                 nominal_modes=laws.nominal_modes(n),
-                **self._read(block.spectrum, block.kept, block.g, n)._asdict(),
+                **self._single(k)._asdict(),
             )
-            for region, n, block in zip(
-                self.config.regions, self.elements, self.blocks, strict=True
+            for k, (region, n, block) in enumerate(
+                zip(self.config.regions, self.elements, self.blocks, strict=True)
             )
         )
 
@@ -385,16 +407,33 @@ class _Numbers:
         kept = np.ones(values.size, dtype=bool)
         spectrum = self.blocks[members[0]].spectrum
         reading = self._read(spectrum, kept, g, sum(self.elements[k] for k in members))
+        if reading.status == "ok" and self.config.region_rule.kind == "none":
+            # The spaces are those of the regions, and so is their dependence on the tolerance.
+            for k in members:
+                own = self._single(k)
+                if own.status == "undetermined":
+                    reading = reading._replace(status=own.status, note=own.note)
         return UnionResult(
             rule="direct_sum", members=members, eigenvalues=values, kept=kept, **reading._asdict()
         )
 
+    def _single(self, k: int) -> Measured:
+        """Entropy of one region, read once."""
+        if k not in self._singles:
+            block = self.blocks[k]
+            self._singles[k] = self._read(block.spectrum, block.kept, block.g, self.elements[k])
+        return self._singles[k]
+
+    def _mark(self, a: int, b: int) -> Status:
+        """The first mark on anything that a pair's mutual information is made of."""
+        singles = [self._single(k).status for k in (a, b)]
+        marks = [*singles, *(union.status for union in self.union((a, b)).values())]
+        return next((mark for mark in marks if mark != "ok"), "ok")
+
     def _entropy(self, members: tuple[int, ...], rule: UnionRule) -> float:
         """Entropy of one or several regions."""
         if len(members) == 1:
-            block = self.blocks[members[0]]
-            reading = self._read(block.spectrum, block.kept, block.g, self.elements[members[0]])
-            return reading.entropy
+            return self._single(members[0]).entropy
         return self.union(members)[rule].entropy
 
     def pairs(self) -> tuple[Pair, ...]:
@@ -408,6 +447,7 @@ class _Numbers:
                 support=single[a] + single[b] - self._entropy((a, b), "support"),
                 direct_sum=single[a] + single[b] - self._entropy((a, b), "direct_sum"),
                 cross_block=gaussian.cross_block(self.blocks[a].g, self.blocks[b].g),
+                status=self._mark(a, b),
             )
             for a, b in itertools.combinations(range(len(self.blocks)), 2)
         )

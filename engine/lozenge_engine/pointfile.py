@@ -111,7 +111,7 @@ def parse_points(data: bytes, *, name: str) -> PointFile:
     table = np.empty((len(body), 2))
     for k, row in enumerate(body):
         try:
-            table[k] = [float(row[c]) for c in columns]
+            table[k] = [float(row[c].replace("_", "?")) for c in columns]
         except (ValueError, IndexError) as error:
             raise refuse(
                 f"{where}, row {k + 1}",

@@ -98,6 +98,12 @@ def _remark(found: gaussian.Symplectic, entropy: float, spread: float) -> tuple[
             f"S changes by {spread:.2g} with the kernel tolerance (1e-6 to 1e-12): without a cut "
             "the tolerance is a truncation rule",
         )
+    if found.tolerance > AGREEMENT:
+        return (
+            "undetermined",
+            f"rounding may move a symplectic value by {found.tolerance:.1e}: the kept modes come "
+            "too near the kernel of Delta",
+        )
     if found.lowest < 0.5 - found.tolerance:
         return (
             "out_of_range",

@@ -144,6 +144,7 @@ class Pair:
     support: float
     direct_sum: float
     cross_block: float
+    status: Status = "ok"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -211,6 +212,7 @@ class Result:
     def trusted(self) -> bool:
         """Whether the certificate holds and no entropy carries a mark."""
         marks = [r.status for r in self.regions] + [u.status for u in self.unions.values()]
+        marks += [p.status for p in self.pairs]
         return self.certificate.met and all(mark == "ok" for mark in marks)
 
     def _rows(self) -> list[tuple[str, str, str]]:
@@ -263,6 +265,7 @@ class Result:
                     "support": _plain(p.support),
                     "direct_sum": _plain(p.direct_sum),
                     "cross_block": _plain(p.cross_block),
+                    "status": p.status,
                 }
                 for p in self.pairs
             ],

@@ -50,6 +50,7 @@ class Stages:
 
     def put(self, key: Hashable, value: object) -> None:
         """Store a value, dropping the least recently used ones beyond the limit."""
+        _freeze(value)
         with self._lock:
             self._entries[key] = (value, _array_bytes(value))
             self._entries.move_to_end(key)
@@ -60,8 +61,19 @@ class Stages:
     def peek(self, key: Hashable) -> Any | None:
         """Value of a key, or None."""
         with self._lock:
-            entry = self._entries.get(key)
-            return None if entry is None else entry[0]
+            if key not in self._entries:
+                return None
+            self._entries.move_to_end(key)
+            return self._entries[key][0]
+
+
+def _freeze(value: object) -> None:
+    """Make arrays in nested tuples read-only: results share them with the cache."""
+    if isinstance(value, np.ndarray):
+        value.setflags(write=False)
+    elif isinstance(value, tuple):
+        for part in value:
+            _freeze(part)
 
 
 def _array_bytes(value: object) -> int:

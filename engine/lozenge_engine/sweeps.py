@@ -255,7 +255,7 @@ def average(setup: Setup, readings: Readings) -> Average:
         }
         if count > 1
         else {},
-        trusted=all(reading.trusted for row in rows for reading in row),
+        trusted=bool(rows) and all(reading.trusted for row in rows for reading in row),
     )
 
 
@@ -314,7 +314,7 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         regions_entropy=_regions_means(rungs, len(regions)),
         used=used,
         fit=fit,
-        note=_fit_note(fit, used, setup),
+        note=_fit_note(fit, used, setup, done=_done(readings, plan), planned=len(plan.draws)),
         reference_slope=calabrese_cardy_slope(ends_inside(regions), order=setup.order)
         if setup.mass == 0
         else None,
@@ -358,7 +358,11 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
     images = [len(placements(setup, layout)) for layout in sets]
     ends = np.cumsum([0, *images])
     points = [[row[ends[i] : ends[i + 1]] for row in rows] for i in range(len(sets))]
-    table = np.array([_column(p, "union_support", None) for p in points]).reshape(len(sets), -1).T
+    table = (
+        np.array([_column(p, "union_support", None) for p in points])
+        .reshape(len(sets), len(rows))
+        .T
+    )
     places = [_abscissa(layout, setup.points.density) for layout in sets]
     x, elements = (np.array([place[i] for place in places]) for i in (0, 1))
     used = (elements >= setup.sweeps.smallest_region) & bool(rows)
@@ -373,7 +377,7 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         regions_entropy=_regions_means(points, len(regions)),
         used=used,
         fit=fit,
-        note=_fit_note(fit, used, setup),
+        note=_fit_note(fit, used, setup, done=_done(readings, plan), planned=len(plan.draws)),
         reference_slope=None,
         done=_done(readings, plan),
         planned=len(plan.draws),
@@ -381,7 +385,9 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
     )
 
 
-def _fit_note(fit: Fit | None, used: NDArray[np.bool_], setup: Setup) -> str:
+def _fit_note(
+    fit: Fit | None, used: NDArray[np.bool_], setup: Setup, *, done: int, planned: int
+) -> str:
     """Why there is no fit yet."""
     if fit is not None:
         return ""
@@ -392,6 +398,8 @@ def _fit_note(fit: Fit | None, used: NDArray[np.bool_], setup: Setup) -> str:
         )
     if realisations(setup) < 2:
         return "no fit: one sprinkling, so no error is known; raise sprinklings"
+    if done == planned:
+        return "no fit: too few sprinklings gave a number at every point"
     return "no fit yet: waiting for more sprinklings"
 
 

@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import functools
 import os
+import threading
 from collections.abc import Iterator
-from contextlib import ExitStack, contextmanager
+from contextlib import contextmanager
 
 from threadpoolctl import LibController, ThreadpoolController
 
@@ -39,13 +40,33 @@ def blas_threads(count: int | None) -> Iterator[None]:
     count : int or None
         Threads for NumPy's BLAS; None leaves it as it is.
     """
-    controller = _controller()
-    with ExitStack() as stack:
-        for library in controller.lib_controllers:
-            wanted = 1 if _is_scipys(library) else count
-            if wanted is not None and library.user_api == "blas":
-                previous = library.num_threads
-                if previous != wanted:
-                    library.set_num_threads(wanted)
-                    stack.callback(library.set_num_threads, previous)
+    libraries = [x for x in _controller().lib_controllers if x.user_api == "blas"]
+    entry = (object(), count)
+    with _LOCK:
+        if not _OPEN:
+            _BASE[:] = [library.num_threads for library in libraries]
+        _OPEN.append(entry)
+        _apply(libraries)
+    try:
         yield
+    finally:
+        with _LOCK:
+            _OPEN.remove(entry)
+            _apply(libraries)
+
+
+_LOCK = threading.Lock()
+_OPEN: list[tuple[object, int | None]] = []
+"""Requests that are open in any thread; the latest of them holds."""
+_BASE: list[int] = []
+"""Threads of each library before the first of them."""
+
+
+def _apply(libraries: list[LibController]) -> None:
+    """Set what the latest open request asks for, or what was there before all of them."""
+    for library, base in zip(libraries, _BASE, strict=True):
+        wanted = base
+        if _OPEN:
+            wanted = 1 if _is_scipys(library) else (_OPEN[-1][1] or base)
+        if library.num_threads != wanted:
+            library.set_num_threads(wanted)

@@ -251,9 +251,12 @@ def contributions(values: FloatArray, *, order: float = 1.0) -> FloatArray:
     if order == 1.0:
         logarithm = np.log(above, out=np.zeros_like(above), where=above > 0)
         return np.asarray((above + 1.0) * np.log1p(above) - above * logarithm)
-    # ln[(1 + x)^q - x^q] = q ln(1 + x) + ln(1 - (x/(1 + x))^q)
-    ratio = (above / (1.0 + above)) ** order
-    return np.asarray((order * np.log1p(above) + np.log1p(-ratio)) / (order - 1.0))
+    # With p = x/(1 + x), ln[(1 + x)^q - x^q] = (q - 1) ln(1 + x) + ln[1 - x (p^(q-1) - 1)]:
+    # no difference of nearly equal numbers as q -> 1.
+    step = order - 1.0
+    logarithm = np.log(above / (1.0 + above), out=np.zeros_like(above), where=above > 0)
+    bracket = np.log1p(-above * np.expm1(step * logarithm))
+    return np.asarray(np.log1p(above) + bracket / step)
 
 
 def cross_block(g_a: FloatArray, g_b: FloatArray) -> float:
