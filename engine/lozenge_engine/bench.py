@@ -2,37 +2,19 @@
 
 from __future__ import annotations
 
-import html
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from typing import Any, ClassVar, NamedTuple
+from typing import Any
 
 import numpy as np
 import param
 from numpy.typing import NDArray
 
-from lozenge_engine.config import (
-    MAX_ELEMENTS,
-    MAX_SEED,
-    MODES,
-    Averaging,
-    Config,
-    PointSource,
-    Rule,
-    Setup,
-    SweepPlan,
-)
+from lozenge_engine.config import Config, PointSource, Setup
 from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.geometry import (
-    MAX_REGIONS,
-    PATCH_AREA,
-    Region,
-    gaps,
-    largest_half_width,
-    largest_mean_gap,
-    largest_separation,
-)
+from lozenge_engine.geometry import PATCH_AREA, Region, gaps
 from lozenge_engine.kernels.laws import diamond_eigenvalues
+from lozenge_engine.parameters import Limits, Parameters
 from lozenge_engine.pipeline import compute
 from lozenge_engine.pointfile import PointFile
 from lozenge_engine.result import Result
@@ -43,26 +25,7 @@ __all__ = ["Bench", "Limits", "continuum_eigenvalues"]
 FloatArray = NDArray[np.float64]
 
 
-class Limits(NamedTuple):
-    """Ends that the present geometry allows, and why a parameter cannot act now.
-
-    Attributes
-    ----------
-    separation_high, half_width_high : float
-        Largest values at which the regions fit.
-    region_count_high : int
-        Most regions that fit in a row at the present size and separation.
-    reasons : dict of str to str
-        For each parameter that has no effect now, the reason.
-    """
-
-    separation_high: float
-    half_width_high: float
-    region_count_high: int
-    reasons: dict[str, str]
-
-
-class Bench(param.Parameterized):
+class Bench(Parameters):
     """Parameters of a computation, checked together; `result` computes and caches by stage.
 
     Every change is checked against all other parameters before it is taken: a refused value
@@ -72,122 +35,6 @@ class Bench(param.Parameterized):
     --------
     >>> Bench(density=1000, region_count=2, half_width=0.3).result()  # doctest: +SKIP
     """
-
-    density = param.Number(
-        default=1250.0,
-        bounds=(1.0, MAX_ELEMENTS / PATCH_AREA),
-        doc="""
-        Elements per unit area; the patch has area 2.""",
-    )
-    elements = param.Number(
-        default=2500.0,
-        doc="""
-        Expected elements of the patch, 2 density: setting it sets the density.""",
-    )
-    seed = param.Integer(
-        default=1,
-        bounds=(0, MAX_SEED - 1),
-        doc="""
-        Seed of the sprinkling; with one seed a higher density only adds elements.""",
-    )
-    kind: Any = param.Selector(
-        default="poisson",
-        objects=["poisson", "fixed", "file"],
-        doc="""
-        Poisson sprinkling, a fixed number of elements, or imported points.""",
-    )
-    mass = param.Number(
-        default=0.0,
-        bounds=(0.0, None),
-        doc="""
-        Mass of the field in inverse patch half-widths, at most 0.3 sqrt(density).""",
-    )
-    region_count = param.Integer(
-        default=2,
-        bounds=(1, MAX_REGIONS),
-        doc="""
-        Number of equal regions in the row.""",
-    )
-    half_width = param.Number(
-        default=0.3,
-        bounds=(0.0, 1.0),
-        inclusive_bounds=(False, True),
-        doc="""
-        Half-width of each region of the row, in patch half-widths.""",
-    )
-    separation = param.Number(
-        default=0.2,
-        bounds=(0.0, 2.0),
-        doc="""
-        Gap between neighbouring corners, in patch half-widths; the mean gap of a list.""",
-    )
-    regions = param.Parameter(
-        default=None,
-        doc="""
-        None for the equal row, or a sequence of Region: an explicit list.""",
-    )
-    truncation_mode: Any = param.Selector(
-        default="two_stages",
-        objects=[*MODES, "custom"],
-        doc="""
-        Which modes count, by name; custom uses patch_rule and region_rule.""",
-    )
-    alpha = param.Number(
-        default=1.0,
-        bounds=(0.05, 20.0),
-        doc="""
-        Multiple of the threshold sqrt(n)/(4 pi), for both stages.""",
-    )
-    number = param.Integer(
-        default=20,
-        bounds=(1, 100_000),
-        doc="""
-        Positive modes kept in each region by the mode fixed_number.""",
-    )
-    patch_rule = param.ClassSelector(
-        class_=Rule,
-        default=Rule(),
-        doc="""
-        Rule of the first stage, for the mode custom.""",
-    )
-    region_rule = param.ClassSelector(
-        class_=Rule,
-        default=Rule(),
-        doc="""
-        Rule of the second stage, for the mode custom.""",
-    )
-    order = param.Number(
-        default=1.0,
-        bounds=(0.5, 50.0),
-        doc="""
-        Renyi order q of the entropies; 1 is the von Neumann entropy.""",
-    )
-    sprinklings = param.Integer(
-        default=8,
-        bounds=(1, 10_000),
-        doc="""
-        Sprinklings to average over.""",
-    )
-    sweeps = param.ClassSelector(
-        class_=SweepPlan,
-        default=SweepPlan(),
-        doc="""
-        Ranges of the three sweeps.""",
-    )
-
-    _MIRRORED: ClassVar[tuple[str, ...]] = (
-        "mass",
-        "region_count",
-        "half_width",
-        "separation",
-        "truncation_mode",
-        "alpha",
-        "number",
-        "patch_rule",
-        "region_rule",
-        "order",
-        "sweeps",
-    )
 
     def __init__(self, *, points: PointFile | None = None, **values: Any) -> None:
         self._file = points
@@ -219,10 +66,6 @@ class Bench(param.Parameterized):
                 with self._silent(), param.parameterized.discard_events(self):
                     self.param.update(**self._settled)
             raise
-
-    def _values(self) -> dict[str, Any]:
-        """All parameters but the name."""
-        return {k: v for k, v in self.param.values().items() if k != "name"}
 
     def _use_file(self, points: PointFile) -> None:
         """Take imported points, whose density is N/2."""
@@ -313,56 +156,6 @@ class Bench(param.Parameterized):
                     do="change that first",
                 )
 
-    def _idle(self) -> dict[str, str]:
-        """Why a parameter has no effect now."""
-        reasons = {}
-        if self.regions is not None:
-            for name in ("region_count", "half_width"):
-                reasons[name] = "a list of regions is in use; clear it to use the equal row"
-        if len(self.regions or range(self.region_count)) < 2:
-            reasons["separation"] = "one region has no neighbour"
-        if self.kind == "file":
-            for name in ("density", "elements", "seed", "sprinklings"):
-                reasons[name] = "the points come from a file"
-        mode = self.truncation_mode
-        if mode in ("none", "custom"):
-            reasons["alpha"] = (
-                "nothing is cut" if mode == "none" else "each stage has its own alpha"
-            )
-        if mode != "custom":
-            for name in ("patch_rule", "region_rule"):
-                reasons[name] = "only the mode custom uses it"
-        if mode != "fixed_number":
-            reasons["number"] = "only the mode fixed_number uses it"
-        return reasons
-
-    def setup(self) -> Setup:
-        """The frozen setup of the present parameters.
-
-        Returns
-        -------
-        Setup
-            Checked.
-
-        Raises
-        ------
-        InputError
-            If the parameters do not fit together.
-        """
-        points = PointSource(
-            kind=self.kind,
-            density=self.density,
-            seed=self.seed,
-            file=self._file.name if self.kind == "file" and self._file else None,
-            sha256=self._file.sha256 if self.kind == "file" and self._file else None,
-        )
-        return Setup(
-            points=points,
-            region_list=None if self.regions is None else tuple(self.regions),
-            averaging=Averaging(sprinklings=self.sprinklings),
-            **{name: getattr(self, name) for name in self._MIRRORED},
-        )
-
     def load(self, setup: Setup, *, points: PointFile | None = None) -> None:
         """Take all values of a setup at once; watchers run once.
 
@@ -434,16 +227,6 @@ class Bench(param.Parameterized):
             points=points,
         )
 
-    def config(self) -> Config:
-        """The configuration of the seed's own sprinkling.
-
-        Returns
-        -------
-        Config
-            Checked.
-        """
-        return self.setup().config()
-
     def result(self, report: Callable[[str, float], None] | None = None) -> Result:
         """Compute the present configuration; only stages that a change touches run again.
 
@@ -459,51 +242,6 @@ class Bench(param.Parameterized):
         """
         return compute(self.config(), points=self._file, stages=self._stages, report=report)
 
-    def limits(self) -> Limits:
-        """Ends of the controls at the present geometry.
-
-        Returns
-        -------
-        Limits
-            Largest values that fit, and why a control cannot act.
-        """
-        if self.regions is None:
-            count, half, gap = self.region_count, self.half_width, self.separation
-            room = largest_separation(count, half)
-            most = max(k for k in range(1, MAX_REGIONS + 1) if _fits(k, half, gap))
-            return Limits(
-                max(0.0, room) if count > 1 else 0.0,
-                max(0.0, largest_half_width(count, gap if count > 1 else 0.0)),
-                most,
-                self._idle(),
-            )
-        return Limits(
-            largest_mean_gap(self.setup().regions()), 1.0, len(self.regions), self._idle()
-        )
-
-    def __repr__(self) -> str:
-        """The parameters that differ from their defaults."""
-        changed = {
-            k: v
-            for k, v in self._values().items()
-            if k != "elements" and v != self.param[k].default
-        }
-        return f"Bench({', '.join(f'{k}={v!r}' for k, v in sorted(changed.items()))})"
-
-    __str__ = __repr__
-
-    def _repr_html_(self) -> str:
-        """A table of all parameters, those that cannot act now with the reason."""
-        idle = self._idle()
-        rows = "".join(
-            f"<tr><td>{name}</td><td>{html.escape(repr(value))}</td>"
-            f"<td>{html.escape(idle.get(name, ''))}</td></tr>"
-            for name, value in self._values().items()
-        )
-        return (
-            f"<table><tr><th>parameter</th><th>value</th><th>no effect now</th></tr>{rows}</table>"
-        )
-
 
 def _disagree(elements: float, density: float) -> InputError:
     """Elements and density were both given and do not fit together."""
@@ -513,11 +251,6 @@ def _disagree(elements: float, density: float) -> InputError:
         allowed="elements = 2 density",
         do="give one of the two",
     )
-
-
-def _fits(count: int, half_width: float, separation: float) -> bool:
-    """Whether a row fits in the patch."""
-    return count * 2 * half_width + (count - 1) * separation <= 2.0 + 1e-12 or count == 1
 
 
 def continuum_eigenvalues(config: Config, count: int) -> FloatArray:

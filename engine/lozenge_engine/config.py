@@ -14,6 +14,7 @@ from dataclasses import asdict, dataclass, field, replace
 from types import MappingProxyType
 from typing import Any, Literal
 
+from lozenge_engine.checks import checked_number, checked_whole
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import (
     MAX_REGIONS,
@@ -56,30 +57,6 @@ TruncationMode = Literal[
 ]
 
 
-def _number(where: str, value: object, *, low: float, high: float, allowed: str) -> float:
-    """Return `value` as a float in [low, high], or refuse it."""
-    if (
-        isinstance(value, bool)
-        or not isinstance(value, int | float)
-        or not math.isfinite(value)
-        or not low <= value <= high
-    ):
-        raise refuse(where, given=value, allowed=allowed, do=f"change {where}")
-    return float(value) + 0.0  # no -0.0
-
-
-def _whole(where: str, value: object, *, low: int, high: int) -> int:
-    """Return `value` as an int in [low, high], or refuse it."""
-    if isinstance(value, bool) or not isinstance(value, int) or not low <= value <= high:
-        raise refuse(
-            where,
-            given=value,
-            allowed=f"a whole number from {low} to {high}",
-            do=f"change {where}",
-        )
-    return value
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PointSource:
     """Where the elements come from.
@@ -108,7 +85,7 @@ class PointSource:
                 "kind", given=self.kind, allowed="poisson, fixed or file", do="choose one of them"
             )
         high = MAX_ELEMENTS / PATCH_AREA
-        density = _number(
+        density = checked_number(
             "density",
             self.density,
             low=1.0,
@@ -116,7 +93,7 @@ class PointSource:
             allowed=f"1 to {high:g} elements per unit area (the patch has area 2)",
         )
         object.__setattr__(self, "density", density)
-        _whole("seed", self.seed, low=0, high=MAX_SEED - 1)
+        checked_whole("seed", self.seed, low=0, high=MAX_SEED - 1)
         if (self.kind == "file") != (self.sha256 is not None):
             raise refuse(
                 "points",
@@ -151,11 +128,11 @@ class Rule:
         kinds = ("none", "root_count", "union_count", "equal_share", "fixed_number")
         if self.kind not in kinds:
             raise refuse("rule", given=self.kind, allowed=", ".join(kinds), do="choose one of them")
-        alpha = _number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
+        alpha = checked_number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
         # What a kind does not use is set to its default, so that equal rules hash equally.
         scaled = self.kind in ("root_count", "union_count", "equal_share")
         object.__setattr__(self, "alpha", alpha if scaled else 1.0)
-        _whole("number", self.number, low=1, high=100_000)
+        checked_whole("number", self.number, low=1, high=100_000)
         object.__setattr__(self, "number", self.number if self.kind == "fixed_number" else 20)
 
 
@@ -207,7 +184,7 @@ class Config:
     order: float = 1.0
 
     def __post_init__(self) -> None:
-        _whole("realisation", self.realisation, low=0, high=10**9)
+        checked_whole("realisation", self.realisation, low=0, high=10**9)
         if self.points.kind == "file" and self.realisation:
             raise refuse(
                 "realisation",
@@ -216,7 +193,7 @@ class Config:
                 do="set sprinklings to 1",
             )
         high = 0.3 * math.sqrt(self.points.density)
-        mass = _number(
+        mass = checked_number(
             "mass",
             self.mass,
             low=0.0,
@@ -233,7 +210,7 @@ class Config:
                 allowed="none, root_count or fixed_number: the patch is one region",
                 do="use that rule for the regions",
             )
-        q = _number("order", self.order, low=0.5, high=50.0, allowed="0.5 to 50")
+        q = checked_number("order", self.order, low=0.5, high=50.0, allowed="0.5 to 50")
         object.__setattr__(self, "order", q)
 
     def canonical_json(self) -> str:
@@ -253,7 +230,7 @@ class Averaging:
     sprinklings: int = 8
 
     def __post_init__(self) -> None:
-        _whole("sprinklings", self.sprinklings, low=1, high=10_000)
+        checked_whole("sprinklings", self.sprinklings, low=1, high=10_000)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -288,17 +265,19 @@ class SweepPlan:
     def __post_init__(self) -> None:
         high = MAX_ELEMENTS / PATCH_AREA
         for name in ("density_low", "density_high"):
-            value = _number(
+            value = checked_number(
                 name, getattr(self, name), low=10.0, high=high, allowed=f"10 to {high:g}"
             )
             object.__setattr__(self, name, value)
         for name in ("size_low", "size_high"):
-            value = _number(name, getattr(self, name), low=0.05, high=20.0, allowed="0.05 to 20")
+            value = checked_number(
+                name, getattr(self, name), low=0.05, high=20.0, allowed="0.05 to 20"
+            )
             object.__setattr__(self, name, value)
-        _whole("density_points", self.density_points, low=3, high=40)
-        _whole("size_points", self.size_points, low=3, high=40)
-        _whole("separation_points", self.separation_points, low=2, high=100)
-        _whole("smallest_region", self.smallest_region, low=0, high=100_000)
+        checked_whole("density_points", self.density_points, low=3, high=40)
+        checked_whole("size_points", self.size_points, low=3, high=40)
+        checked_whole("separation_points", self.separation_points, low=2, high=100)
+        checked_whole("smallest_region", self.smallest_region, low=0, high=100_000)
         for name in ("density", "size"):
             low, top = getattr(self, f"{name}_low"), getattr(self, f"{name}_high")
             if not low < top:
@@ -364,11 +343,15 @@ class Setup:
                 do="choose one of them",
             )
         # Also what is idle now: it is kept, and acts when a control is turned back.
-        _whole("region_count", self.region_count, low=1, high=MAX_REGIONS)
-        _number("half_width", self.half_width, low=1e-9, high=1.0, allowed="0 < half_width <= 1")
-        _number("separation", self.separation, low=0.0, high=2.0, allowed="0 to 2 half-widths")
-        _number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
-        _whole("number", self.number, low=1, high=100_000)
+        checked_whole("region_count", self.region_count, low=1, high=MAX_REGIONS)
+        checked_number(
+            "half_width", self.half_width, low=1e-9, high=1.0, allowed="0 < half_width <= 1"
+        )
+        checked_number(
+            "separation", self.separation, low=0.0, high=2.0, allowed="0 to 2 half-widths"
+        )
+        checked_number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
+        checked_whole("number", self.number, low=1, high=100_000)
         self.config()
 
     def regions(self) -> tuple[Region, ...]:

@@ -8,14 +8,13 @@ patch's modes.
 from __future__ import annotations
 
 import hashlib
-import itertools
 import os
 import platform
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from importlib import metadata
-from typing import Any, Literal, NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,21 +22,16 @@ from numpy.typing import NDArray
 from lozenge_engine import __version__
 from lozenge_engine.config import Config
 from lozenge_engine.cost import Prediction, predict
+from lozenge_engine.entropies import UNION_RULES, Block, Entropies, UnionRule
 from lozenge_engine.errors import refuse
-from lozenge_engine.geometry import PATCH_AREA, Region, gaps
+from lozenge_engine.geometry import PATCH_AREA, Region
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
 from lozenge_engine.kernels.order import Commutator, MassiveCommutator, MasslessCommutator
 from lozenge_engine.kernels.points import Coordinates, membership, points_hash, sprinkle
 from lozenge_engine.pointfile import PointFile
-from lozenge_engine.readout import Measured, read
 from lozenge_engine.result import (
-    Pair,
     PatchSpectrum,
-    RegionResult,
     Result,
-    Status,
-    Triple,
-    UnionResult,
 )
 from lozenge_engine.stages import Stages
 from lozenge_engine.threads import blas_threads
@@ -54,8 +48,6 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 Report = Callable[[str, float], None]
-UnionRule = Literal["support", "direct_sum"]
-UNION_RULES: tuple[UnionRule, UnionRule] = ("support", "direct_sum")
 
 DENSE_LIMIT = 4000
 """Most elements for which every mode is computed (no cut in the first stage)."""
@@ -123,15 +115,6 @@ class _Patch(NamedTuple):
     kept: NDArray[np.bool_]
 
 
-class _Block(NamedTuple):
-    """Second stage of one region."""
-
-    spectrum: gaussian.Spectrum
-    cut: float
-    kept: NDArray[np.bool_]
-    g: FloatArray
-
-
 class _Computation:
     """The stages of one configuration."""
 
@@ -196,7 +179,9 @@ class _Computation:
                 for spectrum, own in zip(spectra, rows, strict=True)
             ]
         with self._timed("entropies"):
-            numbers = _Numbers(self.config, patch, blocks, [own.size for own in rows])
+            numbers = Entropies(
+                self.config, 2 * int(patch.kept.sum()), blocks, [own.size for own in rows]
+            )
             regions = numbers.regions()
             unions = numbers.union(tuple(range(len(blocks)))) if len(blocks) > 1 else {}
             pairs, triples = numbers.pairs(), numbers.triples()
@@ -310,7 +295,7 @@ class _Computation:
 
     def _block(
         self, spectrum: gaussian.Spectrum, elements: int, region_of: NDArray[np.int8]
-    ) -> _Block:
+    ) -> Block:
         """What the regions' rule keeps of one region."""
         rule = self.config.region_rule
         cut = cuts.threshold(
@@ -320,152 +305,7 @@ class _Computation:
             regions=len(self.config.regions),
         )
         kept = cuts.keep(spectrum.pairs.values, rule, cut=cut)
-        return _Block(spectrum, cut, kept, gaussian.projected(spectrum, kept))
-
-
-class _Numbers:
-    """Entropies of regions, pairs, triples and the union from the regions' blocks."""
-
-    def __init__(
-        self, config: Config, patch: _Patch, blocks: list[_Block], elements: list[int]
-    ) -> None:
-        self.config = config
-        self.blocks = blocks
-        self.elements = elements
-        self.rank = 2 * int(patch.kept.sum()) if config.patch_rule.kind != "none" else None
-        self._singles: dict[int, Measured] = {}
-        self._unions: dict[tuple[int, ...], dict[str, UnionResult]] = {}
-
-    def _read(
-        self, spectrum: gaussian.Spectrum, kept: NDArray[np.bool_], g: FloatArray, elements: int
-    ) -> Measured:
-        """Entropy of a kept space, with what has to be said about it."""
-        return read(
-            spectrum,
-            kept,
-            g,
-            order=self.config.order,
-            uncut=self.config.region_rule.kind == "none",
-            elements=elements,
-            rank=self.rank,
-        )
-
-    def regions(self) -> tuple[RegionResult, ...]:
-        """Every region."""
-        return tuple(
-            RegionResult(
-                region=region,
-                elements=n,
-                eigenvalues=block.spectrum.pairs.values,
-                kept=block.kept,
-                cut=block.cut,
-                nominal_modes=laws.nominal_modes(n),
-                **self._single(k)._asdict(),
-            )
-            for k, (region, n, block) in enumerate(
-                zip(self.config.regions, self.elements, self.blocks, strict=True)
-            )
-        )
-
-    def union(self, members: tuple[int, ...]) -> dict[str, UnionResult]:
-        """A union of regions under both rules."""
-        if members not in self._unions:
-            self._unions[members] = {
-                "support": self._by_support(members),
-                "direct_sum": self._direct_sum(members),
-            }
-        return self._unions[members]
-
-    def _by_support(self, members: tuple[int, ...]) -> UnionResult:
-        """The union's own modes, each cut with the count of the region that holds most of it."""
-        parts = [self.blocks[k] for k in members]
-        factor = np.vstack([part.spectrum.factor for part in parts])
-        sizes = tuple(part.spectrum.factor.shape[0] for part in parts)
-        if factor.shape[0] > factor.shape[1]:
-            q, small = np.linalg.qr(factor)
-            spectrum = gaussian.restricted_spectrum(small)
-            lifted = spectrum.pairs._replace(a=q @ spectrum.pairs.a, b=q @ spectrum.pairs.b)
-            held = gaussian.shares(spectrum._replace(pairs=lifted), sizes)
-        else:
-            spectrum = gaussian.restricted_spectrum(factor)
-            held = gaussian.shares(spectrum, sizes)
-        values = spectrum.pairs.values
-        kept = cuts.keep_by_support(
-            values, held, self.config.region_rule, cuts=np.array([part.cut for part in parts])
-        )
-        g = gaussian.projected(spectrum, kept)
-        reading = self._read(spectrum, kept, g, sum(self.elements[k] for k in members))
-        return UnionResult(
-            rule="support", members=members, eigenvalues=values, kept=kept, **reading._asdict()
-        )
-
-    def _direct_sum(self, members: tuple[int, ...]) -> UnionResult:
-        """The span of the regions' own kept modes, with its cross blocks."""
-        parts = [self.blocks[k] for k in members]
-        g = np.hstack([part.g for part in parts])
-        values = np.sort(np.concatenate([p.spectrum.pairs.values[p.kept] for p in parts]))[::-1]
-        kept = np.ones(values.size, dtype=bool)
-        spectrum = self.blocks[members[0]].spectrum
-        reading = self._read(spectrum, kept, g, sum(self.elements[k] for k in members))
-        if reading.status == "ok" and self.config.region_rule.kind == "none":
-            # The spaces are those of the regions, and so is their dependence on the tolerance.
-            for k in members:
-                own = self._single(k)
-                if own.status == "undetermined":
-                    reading = reading._replace(status=own.status, note=own.note)
-        return UnionResult(
-            rule="direct_sum", members=members, eigenvalues=values, kept=kept, **reading._asdict()
-        )
-
-    def _single(self, k: int) -> Measured:
-        """Entropy of one region, read once."""
-        if k not in self._singles:
-            block = self.blocks[k]
-            self._singles[k] = self._read(block.spectrum, block.kept, block.g, self.elements[k])
-        return self._singles[k]
-
-    def _mark(self, a: int, b: int) -> Status:
-        """The first mark on anything that a pair's mutual information is made of."""
-        singles = [self._single(k).status for k in (a, b)]
-        marks = [*singles, *(union.status for union in self.union((a, b)).values())]
-        return next((mark for mark in marks if mark != "ok"), "ok")
-
-    def _entropy(self, members: tuple[int, ...], rule: UnionRule) -> float:
-        """Entropy of one or several regions."""
-        if len(members) == 1:
-            return self._single(members[0]).entropy
-        return self.union(members)[rule].entropy
-
-    def pairs(self) -> tuple[Pair, ...]:
-        """Mutual information of every pair, with the norm of its cross block."""
-        single = [self._entropy((k,), "support") for k in range(len(self.blocks))]
-        return tuple(
-            Pair(
-                a=a,
-                b=b,
-                gap=gaps((self.config.regions[a], self.config.regions[b]))[0],
-                support=single[a] + single[b] - self._entropy((a, b), "support"),
-                direct_sum=single[a] + single[b] - self._entropy((a, b), "direct_sum"),
-                cross_block=gaussian.cross_block(self.blocks[a].g, self.blocks[b].g),
-                status=self._mark(a, b),
-            )
-            for a, b in itertools.combinations(range(len(self.blocks)), 2)
-        )
-
-    def triples(self) -> tuple[Triple, ...]:
-        """Tripartite information of every three neighbouring regions."""
-        found = []
-        for a in range(len(self.blocks) - 2):
-            members = (a, a + 1, a + 2)
-            values = {}
-            for rule in UNION_RULES:
-                values[rule] = sum(
-                    (-1) ** (size + 1)
-                    * sum(self._entropy(s, rule) for s in itertools.combinations(members, size))
-                    for size in (1, 2, 3)
-                )
-            found.append(Triple(members=members, **values))
-        return tuple(found)
+        return Block(spectrum, cut, kept, gaussian.projected(spectrum, kept))
 
 
 def versions() -> dict[str, str]:

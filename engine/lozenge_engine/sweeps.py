@@ -9,11 +9,20 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Literal, NamedTuple
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
+from lozenge_engine.averages import (
+    Average,
+    PairEstimate,
+    Readings,
+    average,
+    column_of,
+    count_done,
+    rows_of,
+)
 from lozenge_engine.config import Setup
 from lozenge_engine.draws import (
     Plan,
@@ -56,50 +65,6 @@ __all__ = [
 ]
 
 FloatArray = NDArray[np.float64]
-Readings = Mapping[str, tuple[Reading, ...]]
-
-
-class PairEstimate(NamedTuple):
-    """Mutual information of two regions under both union rules, and the mean cross block."""
-
-    a: int
-    b: int
-    support: Estimate
-    direct_sum: Estimate
-    cross_block: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Average:
-    """Means over sprinklings at the present geometry.
-
-    Parameters
-    ----------
-    count, planned : int
-        Sprinklings read so far, and asked for.
-    elements, kept : tuple of Estimate
-        Of each region.
-    regions : tuple of Estimate
-        Entropy of each region.
-    unions : mapping of str to Estimate
-        Entropy of all regions together, per union rule; empty for one region.
-    pairs : tuple of PairEstimate
-        Every pair.
-    total_correlation : mapping of str to Estimate
-        Sum of the regions' entropies minus the union's, per union rule; empty for one region.
-    trusted : bool
-        Whether every reading is trusted.
-    """
-
-    count: int
-    planned: int
-    elements: tuple[Estimate, ...]
-    kept: tuple[Estimate, ...]
-    regions: tuple[Estimate, ...]
-    unions: Mapping[str, Estimate]
-    pairs: tuple[PairEstimate, ...]
-    total_correlation: Mapping[str, Estimate]
-    trusted: bool
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -182,83 +147,6 @@ class SeparationCurve:
     note: str
 
 
-def _rows(readings: Readings, plan: Plan) -> list[tuple[Reading, ...]]:
-    """Readings of the draws that are done and gave numbers."""
-    return [readings[d.key] for d in plan.draws if readings.get(d.key)]
-
-
-def _done(readings: Readings, plan: Plan) -> int:
-    """Draws that are done, failed ones included."""
-    return sum(d.key in readings for d in plan.draws)
-
-
-def _column(rows: list[tuple[Reading, ...]], field: str, index: int | None) -> FloatArray:
-    """Mean over placements of one number, for each sprinkling."""
-    return np.array(
-        [
-            np.mean([getattr(r, field) if index is None else getattr(r, field)[index] for r in row])
-            for row in rows
-        ]
-    )
-
-
-def average(setup: Setup, readings: Readings) -> Average:
-    """Average the readings of `average_draws` that are there.
-
-    Parameters
-    ----------
-    setup : Setup
-        The setup that was drawn.
-    readings : mapping of str to tuple of Reading
-        By the key of their draw; missing ones are not done yet, empty ones have failed.
-
-    Returns
-    -------
-    Average
-        Errors are NaN with fewer than two sprinklings.
-    """
-    plan = average_draws(setup)
-    rows = _rows(readings, plan)
-    count = len(setup.regions())
-
-    def column(field: str, index: int | None = None) -> Estimate:
-        return estimate(_column(rows, field, index))
-
-    pairs = [(a, b) for a in range(count) for b in range(a + 1, count)]
-    return Average(
-        count=len(rows),
-        planned=len(plan.draws),
-        elements=tuple(column("elements", k) for k in range(count)),
-        kept=tuple(column("kept", k) for k in range(count)),
-        regions=tuple(column("entropy", k) for k in range(count)),
-        unions={rule: column(f"union_{rule}") for rule in UNION_RULES} if count > 1 else {},
-        pairs=tuple(
-            PairEstimate(
-                a,
-                b,
-                column("pair_support", i),
-                column("pair_direct_sum", i),
-                column("cross_block", i).mean,
-            )
-            for i, (a, b) in enumerate(pairs)
-        ),
-        total_correlation={
-            rule: estimate(
-                np.array(
-                    [
-                        np.mean([r.entropy.sum() - getattr(r, f"union_{rule}") for r in row])
-                        for row in rows
-                    ]
-                )
-            )
-            for rule in UNION_RULES
-        }
-        if count > 1
-        else {},
-        trusted=bool(rows) and all(reading.trusted for row in rows for reading in row),
-    )
-
-
 def _abscissa(regions: tuple[Region, ...], density: float) -> tuple[float, float]:
     """Mean of ln(l/a) over the regions, and the expected elements of the smallest."""
     x = sum(math.log(2 * r.half_width * math.sqrt(density)) for r in regions) / len(regions)
@@ -298,7 +186,7 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         if readings.get(draw.key):
             rungs[rung].append(readings[draw.key])
     places = [_abscissa(regions, float(density)) for density in plan.values]
-    samples = [_finite(_column(rows, "union_support", None)) for rows in rungs]
+    samples = [_finite(column_of(rows, "union_support", None)) for rows in rungs]
     elements = np.array([n for _, n in places])
     big = elements >= setup.sweeps.smallest_region
     used = big & np.array([s.size > 0 for s in samples], dtype=bool)
@@ -314,11 +202,11 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         regions_entropy=_regions_means(rungs, len(regions)),
         used=used,
         fit=fit,
-        note=_fit_note(fit, used, setup, done=_done(readings, plan), planned=len(plan.draws)),
+        note=_fit_note(fit, used, setup, done=count_done(readings, plan), planned=len(plan.draws)),
         reference_slope=calabrese_cardy_slope(ends_inside(regions), order=setup.order)
         if setup.mass == 0
         else None,
-        done=_done(readings, plan),
+        done=count_done(readings, plan),
         planned=len(plan.draws),
         left_out=plan.left_out,
     )
@@ -333,7 +221,7 @@ def _regions_means(rungs: list[list[tuple[Reading, ...]]], count: int) -> FloatA
     means = np.full((len(rungs), count), np.nan)
     for i, rows in enumerate(rungs):
         for k in range(count):
-            means[i, k] = estimate(_column(rows, "entropy", k)).mean
+            means[i, k] = estimate(column_of(rows, "entropy", k)).mean
     return means
 
 
@@ -353,13 +241,13 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         Without a reference slope: the infrared piece changes with the size.
     """
     plan, regions = size_draws(setup), setup.regions()
-    rows = _rows(readings, plan)
+    rows = rows_of(readings, plan)
     sets = [scaled(regions, float(factor)) for factor in plan.values]
     images = [len(placements(setup, layout)) for layout in sets]
     ends = np.cumsum([0, *images])
     points = [[row[ends[i] : ends[i + 1]] for row in rows] for i in range(len(sets))]
     table = (
-        np.array([_column(p, "union_support", None) for p in points])
+        np.array([column_of(p, "union_support", None) for p in points])
         .reshape(len(sets), len(rows))
         .T
     )
@@ -377,9 +265,9 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         regions_entropy=_regions_means(points, len(regions)),
         used=used,
         fit=fit,
-        note=_fit_note(fit, used, setup, done=_done(readings, plan), planned=len(plan.draws)),
+        note=_fit_note(fit, used, setup, done=count_done(readings, plan), planned=len(plan.draws)),
         reference_slope=None,
-        done=_done(readings, plan),
+        done=count_done(readings, plan),
         planned=len(plan.draws),
         left_out=plan.left_out,
     )
@@ -419,7 +307,7 @@ def separation_curve(setup: Setup, readings: Readings) -> SeparationCurve:
         Empty, with a note, for one region.
     """
     plan, regions = separation_draws(setup), setup.regions()
-    rows = _rows(readings, plan)
+    rows = rows_of(readings, plan)
     count = len(regions)
     pair_list = [(a, b) for a in range(count) for b in range(a + 1, count)]
     nearest = nearest_pair(regions)
@@ -429,7 +317,7 @@ def separation_curve(setup: Setup, readings: Readings) -> SeparationCurve:
     points = [[row[ends[i] : ends[i + 1]] for row in rows] for i in range(len(layouts))]
 
     def curve(field: str, index: int | None) -> tuple[Estimate, ...]:
-        return tuple(estimate(_column(p, field, index)) for p in points)
+        return tuple(estimate(column_of(p, field, index)) for p in points)
 
     return SeparationCurve(
         separation=plan.values,
@@ -437,7 +325,7 @@ def separation_curve(setup: Setup, readings: Readings) -> SeparationCurve:
         union={rule: curve(f"union_{rule}", None) for rule in UNION_RULES},
         mutual_information={rule: curve(f"pair_{rule}", index) for rule in UNION_RULES},
         cross_block=np.array([e.mean for e in curve("cross_block", index)]),
-        done=_done(readings, plan),
+        done=count_done(readings, plan),
         planned=len(plan.draws),
         note="; ".join(plan.left_out),
     )

@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from lozenge_engine import pipeline
+from lozenge_engine import entropies, pipeline
 from lozenge_engine.config import MODES, Config, PointSource, Rule, Setup
 from lozenge_engine.errors import Cancelled, InputError
 from lozenge_engine.geometry import Region, equal_row, mirror_images
@@ -543,7 +543,7 @@ def test_an_unmet_certificate_marks_the_result(monkeypatch: pytest.MonkeyPatch) 
 
 
 def test_a_mark_on_any_pair_makes_the_result_untrusted(monkeypatch: pytest.MonkeyPatch) -> None:
-    original = pipeline.read
+    original = entropies.read
 
     def marked(*args: Any, elements: int, **kw: Any) -> Any:
         found = original(*args, elements=elements, **kw)
@@ -551,7 +551,7 @@ def test_a_mark_on_any_pair_makes_the_result_untrusted(monkeypatch: pytest.Monke
 
     result = compute(setup(3).config())
     pair = result.regions[0].elements + result.regions[1].elements
-    monkeypatch.setattr(pipeline, "read", marked)
+    monkeypatch.setattr(entropies, "read", marked)
     assert not compute(setup(3).config()).trusted
 
 
