@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from lozenge_engine import entropies, pipeline
+from lozenge_engine import entropies
 from lozenge_engine.config import MODES, Config, PointSource, Rule, Setup
 from lozenge_engine.errors import Cancelled, InputError
 from lozenge_engine.geometry import Region, equal_row, mirror_images
