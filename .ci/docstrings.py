@@ -2,8 +2,8 @@
 
 On the objects, because the fields of dataclasses and named tuples are parameters there, which a
 reader of the source text takes for unknown ones.  The checks are those of
-[tool.numpydoc_validation].  A one-line docstring may do for what takes no parameters.  That every
-module has one is ruff's affair.
+[tool.numpydoc_validation].  A one-line docstring may do for what takes no parameters; a reactive
+parameter is documented by its own doc.  That every module has a docstring is ruff's affair.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ from functools import cached_property
 from pathlib import Path
 from types import ModuleType
 
+import param
 from numpydoc.docscrape import NumpyDocString
 from numpydoc.validate import validate
 
@@ -54,10 +55,12 @@ def public_names(module: ModuleType) -> Iterator[str]:
 
 
 def undocumented_fields(owner: type) -> set[str]:
-    """Names of fields that the class lists neither as parameters nor as attributes."""
+    """Names of fields that the class documents neither in a section nor by their own doc."""
     text = NumpyDocString(inspect.getdoc(owner) or "")
     entries = [*text["Parameters"], *text["Attributes"]]
     documented = {name for entry in entries for name in entry.name.split(", ")}
+    if issubclass(owner, param.Parameterized):
+        documented |= {name for name, value in owner.param.objects().items() if value.doc}
     protocol = getattr(owner, "_is_protocol", False)
     return set() if protocol else set(inspect.signature(owner).parameters) - documented
 

@@ -49,7 +49,7 @@ class Sender:
     points_sha256 : str
         Hash of the sender's point set.
     versions : mapping of str to str
-        Of Python and the libraries.
+        Of Python, the libraries and the program.
     """
 
     numbers: Mapping[str, Any]

@@ -23,7 +23,17 @@ Readings = Mapping[str, tuple[Reading, ...]]
 
 
 class PairEstimate(NamedTuple):
-    """Mutual information of two regions under both union rules, and the mean cross block."""
+    """Mutual information of two regions under both union rules, and the mean cross block.
+
+    Attributes
+    ----------
+    a, b : int
+        Indices of the regions, a < b.
+    support, direct_sum : Estimate
+        S_A + S_B - S_AB in nats, per union rule.
+    cross_block : float
+        Mean of `Pair.cross_block`, dimensionless; NaN without readings.
+    """
 
     a: int
     b: int
@@ -41,17 +51,17 @@ class Average:
     count, planned : int
         Sprinklings read so far, and asked for.
     elements, kept : tuple of Estimate
-        Of each region.
+        Elements and kept positive modes of each region.
     regions : tuple of Estimate
-        Entropy of each region.
+        Entropy of each region, in nats.
     unions : mapping of str to Estimate
-        Entropy of all regions together, per union rule; empty for one region.
+        Entropy of all regions together, in nats, per union rule; empty for one region.
     pairs : tuple of PairEstimate
-        Every pair.
+        Every pair a < b, in lexicographic order.
     total_correlation : mapping of str to Estimate
         Sum of the regions' entropies minus the union's, per union rule; empty for one region.
     trusted : bool
-        Whether every reading is trusted.
+        Whether there is a reading and every one is trusted.
     """
 
     count: int
@@ -66,17 +76,58 @@ class Average:
 
 
 def rows_of(readings: Readings, plan: Plan) -> list[tuple[Reading, ...]]:
-    """Readings of the draws that are done and gave numbers."""
+    """Readings of the draws that are done and gave numbers.
+
+    Parameters
+    ----------
+    readings : mapping of str to tuple of Reading
+        By the key of their draw; missing or empty ones are passed over.
+    plan : Plan
+        The draws.
+
+    Returns
+    -------
+    list of tuple of Reading
+        One row for each such draw, in the plan's order; one reading for each layout.
+    """
     return [readings[d.key] for d in plan.draws if readings.get(d.key)]
 
 
 def count_done(readings: Readings, plan: Plan) -> int:
-    """Draws that are done, failed ones included."""
+    """Count the draws that are done, failed ones included.
+
+    Parameters
+    ----------
+    readings : mapping of str to tuple of Reading
+        By the key of their draw; empty ones have failed.
+    plan : Plan
+        The draws.
+
+    Returns
+    -------
+    int
+        From 0 to the number of draws.
+    """
     return sum(d.key in readings for d in plan.draws)
 
 
 def column_of(rows: list[tuple[Reading, ...]], field: str, index: int | None) -> FloatArray:
-    """Mean over placements of one number, for each sprinkling."""
+    """Mean over placements of one number, for each sprinkling.
+
+    Parameters
+    ----------
+    rows : list of tuple of Reading
+        R sprinklings with at least one placement each.
+    field : str
+        A field of `Reading`.
+    index : int or None
+        Place in the field's array; None for a field that is a single number.
+
+    Returns
+    -------
+    ndarray, shape (R,), float64
+        NaN where one placement has no number.
+    """
     return np.array(
         [
             np.mean([getattr(r, field) if index is None else getattr(r, field)[index] for r in row])

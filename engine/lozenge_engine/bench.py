@@ -28,8 +28,25 @@ FloatArray = NDArray[np.float64]
 class Bench(Parameters):
     """Parameters of a computation, checked together; `result` computes and caches by stage.
 
-    Every change is checked against all other parameters before it is taken: a refused value
-    raises `InputError` and leaves the bench as it was.
+    Every change is checked against all other parameters before it is taken: a refused one raises
+    and leaves the bench as it was.  One of `density` and `elements` sets the other.
+
+    Parameters
+    ----------
+    points : PointFile or None
+        Imported points to use, which set the kind and the density.
+    **values : Any
+        Parameters of `Parameters` by name, instead of their defaults.  `regions` may be a list;
+        without a `separation` beside it the list keeps its gaps.
+
+    Raises
+    ------
+    InputError
+        If the values do not fit together.
+    ValueError
+        If a value is outside its parameter's own bounds (`InputError` is one, too).
+    TypeError
+        If a name is no parameter.
 
     Examples
     --------
@@ -164,12 +181,12 @@ class Bench(Parameters):
         setup : Setup
             The values.
         points : PointFile or None
-            The imported points that the setup asks for.
+            The imported points that the setup asks for; None for those that the bench holds.
 
         Raises
         ------
         InputError
-            If the setup asks for imported points that were not given; nothing changes then.
+            If the setup asks for imported points that are not there; nothing changes then.
         """
         file = points or self._file
         source = setup.points
@@ -206,12 +223,17 @@ class Bench(Parameters):
         return self._file
 
     def import_points(self, points: PointFile) -> None:
-        """Use imported points instead of a sprinkling.
+        """Use imported points instead of a sprinkling; the density becomes N/2.
 
         Parameters
         ----------
         points : PointFile
             From `lozenge_engine.pointfile`.
+
+        Raises
+        ------
+        InputError
+            If the other parameters do not fit the new density; nothing changes then.
         """
         setup = self.setup()
         self.load(
@@ -238,7 +260,18 @@ class Bench(Parameters):
         Returns
         -------
         Result
-            Of the seed's own sprinkling.
+            Of the seed's own sprinkling, or of the imported points.
+
+        Raises
+        ------
+        InputError
+            If the configuration cannot be computed on these points.
+        Cancelled
+            If `report` raises it.
+
+        Notes
+        -----
+        Cost: that of `lozenge_engine.pipeline.compute`; the cache keeps up to 1.5 GB.
         """
         return compute(self.config(), points=self._file, stages=self._stages, report=report)
 
@@ -261,11 +294,11 @@ def continuum_eigenvalues(config: Config, count: int) -> FloatArray:
     config : Config
         Its density is used; its mass is not.
     count : int
-        How many.
+        How many, >= 1.
 
     Returns
     -------
     ndarray, shape (count,), float64
-        Descending.
+        Descending; see `lozenge_engine.kernels.laws.diamond_eigenvalues`.
     """
     return diamond_eigenvalues(count, elements=PATCH_AREA * config.points.density)

@@ -10,7 +10,29 @@ __all__ = ["checked_number", "checked_whole"]
 
 
 def checked_number(where: str, value: object, *, low: float, high: float, allowed: str) -> float:
-    """Return `value` as a float in [low, high], or refuse it."""
+    """Return a number as a float in [low, high], or refuse it.
+
+    Parameters
+    ----------
+    where : str
+        The parameter, for the refusal.
+    value : object
+        What was given.
+    low, high : float
+        Ends of the range, both allowed.
+    allowed : str
+        The range in words, for the refusal.
+
+    Returns
+    -------
+    float
+        The value, never -0.0.
+
+    Raises
+    ------
+    InputError
+        If it is no int or float, a bool, not finite or outside the range.
+    """
     if (
         isinstance(value, bool)
         or not isinstance(value, int | float)
@@ -22,7 +44,27 @@ def checked_number(where: str, value: object, *, low: float, high: float, allowe
 
 
 def checked_whole(where: str, value: object, *, low: int, high: int) -> int:
-    """Return `value` as an int in [low, high], or refuse it."""
+    """Return a whole number in [low, high], or refuse it.
+
+    Parameters
+    ----------
+    where : str
+        The parameter, for the refusal.
+    value : object
+        What was given.
+    low, high : int
+        Ends of the range, both allowed.
+
+    Returns
+    -------
+    int
+        The value.
+
+    Raises
+    ------
+    InputError
+        If it is no int, a bool or outside the range.
+    """
     if isinstance(value, bool) or not isinstance(value, int) or not low <= value <= high:
         raise refuse(
             where,

@@ -1,7 +1,6 @@
 """Frozen, checked values: what is computed (`Config`) and what a user sets (`Setup`).
 
-A `Setup` is what a preset file holds and what the page's controls show; it compiles to the
-`Config` of one sprinkling, whose canonical JSON is hashed to key caches and results.
+Each is checked when it is built: `InputError` for what is out of range or does not fit.
 """
 
 from __future__ import annotations
@@ -66,7 +65,7 @@ class PointSource:
     kind : {"poisson", "fixed", "file"}
         Poisson sprinkling, a fixed count round(2 density), or imported points.
     density : float
-        Elements per unit area; the patch has area 2. For imported points N/2.
+        Elements per unit area, 1 to 500 000; the patch has area 2. For imported points N/2.
     seed : int
         0 <= seed < 2**53; not used for imported points.
     file, sha256 : str or None
@@ -114,10 +113,9 @@ class Rule:
         operator's own region; ``union_count``: n is the union's count for every region;
         ``equal_share``: n is the union's count over the number of regions;
         ``fixed_number``: the `number` largest positive modes of each region.
-    alpha : float
-        Multiple of the threshold, 0.05 to 20; for the three kinds with a count.
-    number : int
-        Positive modes to keep, for ``fixed_number``.
+    alpha, number : float, int
+        Multiple of the threshold, 0.05 to 20, for the three kinds with a count; positive modes to
+        keep, 1 to 100 000, for ``fixed_number``.
     """
 
     kind: RuleKind = "root_count"
@@ -156,23 +154,14 @@ class Config:
 
     Parameters
     ----------
-    points : PointSource
-        The elements.
-    realisation : int
-        0 for the sprinkling of the seed itself, then 1, 2, ...
+    points, realisation : PointSource, int
+        The elements: realisation 0 is the sprinkling of the seed itself, then 1, ..., 10**9.
     mass : float
         In inverse patch half-widths, 0 <= mass <= 0.3 sqrt(density).
     regions : tuple of Region
         One to eight, in the order of their letters.
-    patch_rule, region_rule : Rule
-        The two stages of the truncation.
-    order : float
-        Renyi order q >= 0.5; 1 is the von Neumann entropy.
-
-    Raises
-    ------
-    InputError
-        If a value is out of range, or the regions do not fit.
+    patch_rule, region_rule, order : Rule, Rule, float
+        The two stages of the truncation; Renyi order q, 0.5 to 50, 1 the von Neumann entropy.
     """
 
     points: PointSource = field(default_factory=PointSource)
@@ -225,7 +214,13 @@ class Config:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Averaging:
-    """How many sprinklings the numbers are averaged over, 1 to 10 000."""
+    """How many sprinklings the numbers are averaged over.
+
+    Parameters
+    ----------
+    sprinklings : int
+        1 to 10 000.
+    """
 
     sprinklings: int = 8
 
@@ -239,18 +234,14 @@ class SweepPlan:
 
     Parameters
     ----------
-    density_low, density_high : float
-        Ends of the density ladder at fixed geometry, elements per unit area.
-    density_points : int
-        Rungs of it, 3 to 40, equally spaced in the logarithm.
-    size_low, size_high : float
-        Ends of the size sweep at fixed density, as multiples of the regions' half-widths.
-    size_points : int
-        Points of it, 3 to 40.
-    separation_points : int
-        Points of the separation sweep, 2 to 100, from touching to the largest that fits.
-    smallest_region : int
-        Regions expected to hold fewer elements than this are left out of fits.
+    density_low, density_high, density_points : float, float, int
+        Density ladder at fixed geometry, 10 to 500 000 elements per unit area; 3 to 40 rungs.
+    size_low, size_high, size_points : float, float, int
+        Size sweep at fixed density, 0.05 to 20 times the half-widths; 3 to 40 points.  Both are
+        equally spaced in the logarithm.
+    separation_points, smallest_region : int
+        2 to 100 separations, from touching to the largest that fits; fits leave out points whose
+        smallest region expects fewer elements than this, 0 to 100 000.
     """
 
     density_low: float = 500.0
@@ -291,32 +282,20 @@ class SweepPlan:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Setup:
-    """What a user sets: the engine part of a preset.
+    """What a user sets: the engine part of a preset, which compiles to a `Config`.
 
     Parameters
     ----------
-    points : PointSource
-        The elements.
-    mass : float
-        In inverse patch half-widths.
-    region_count, half_width, separation : int, float, float
-        The equal row; with a list of regions only `separation` acts (its mean gap).
-    region_list : tuple of Region or None
-        An explicit list instead of the row.
-    truncation_mode : str
-        A key of `MODES`, or ``custom``.
-    alpha : float
-        Multiple of the threshold, for both stages of a named mode.
-    number : int
-        Positive modes per region, for the mode ``fixed_number``.
+    points, mass : PointSource, float
+        As in `Config`.
+    region_count, half_width, separation, region_list : int, float, float, tuple or None
+        The equal row, or a list of Region instead, of which `separation` sets the mean gap.
+    truncation_mode, alpha, number : str, float, int
+        A key of `MODES` with the alpha and number of its rules, or ``custom``.
     patch_rule, region_rule : Rule
         The stages of the mode ``custom``; otherwise ignored.
-    order : float
-        Renyi order.
-    averaging : Averaging
-        Number of sprinklings.
-    sweeps : SweepPlan
-        The three sweeps.
+    order, averaging, sweeps : float, Averaging, SweepPlan
+        Renyi order as in `Config`, number of sprinklings, the three sweeps.
     """
 
     points: PointSource = field(default_factory=PointSource)
@@ -381,7 +360,18 @@ class Setup:
         )
 
     def config(self, realisation: int = 0) -> Config:
-        """Compile to the configuration of one sprinkling."""
+        """Compile to the configuration of one sprinkling.
+
+        Parameters
+        ----------
+        realisation : int
+            0 for the seed's own, then 1, 2, ...; 0 for imported points.
+
+        Returns
+        -------
+        Config
+            Checked.
+        """
         patch_rule, region_rule = self.rules()
         return Config(
             points=self.points,
@@ -394,5 +384,16 @@ class Setup:
         )
 
     def with_(self, **changes: Any) -> Setup:
-        """A copy with some values changed, checked again."""
+        """Make a copy with some values changed.
+
+        Parameters
+        ----------
+        **changes : Any
+            New values by the names of their fields.
+
+        Returns
+        -------
+        Setup
+            Checked again.
+        """
         return replace(self, **changes)

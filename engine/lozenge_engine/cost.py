@@ -1,7 +1,7 @@
 """What a computation will take: seconds and bytes, from the kernels' own cost formulas.
 
-The formulas count flops and applications of the operator; how fast this machine does either is
-measured once, at first use, in about 0.2 s, and corrected by every computation that follows.
+The formulas count flops and applications of the operator; how fast this machine computes is
+measured once, at first use, in about 0.2 s, and corrected by what `CostModel.learn` is told.
 """
 
 from __future__ import annotations
@@ -28,7 +28,7 @@ BASE_BYTES = 250e6
 
 
 class Prediction(NamedTuple):
-    """Expected wall time and peak memory.
+    """Expected wall time and peak memory, at the nominal density.
 
     Attributes
     ----------
@@ -100,7 +100,7 @@ class CostModel:
         Returns
         -------
         Prediction
-            Good to about 30 % once a computation of similar size has been seen.
+            Meant to be good to about 30 % once `learn` has seen computations of similar size.
         """
         work = _counted(config)
         seconds = self._raw(config, work) * self._correction.get(_size_class(work), 1.0)
@@ -122,12 +122,12 @@ class CostModel:
         config : Config
             What was computed, with nothing cached.
         seconds : float
-            Its wall time.
+            Its wall time, > 0.
 
         Returns
         -------
         float
-            Actual over predicted time.
+            Actual over predicted time; the correction moves by its square root.
         """
         work = _counted(config)
         ratio = seconds / self.predict(config).seconds

@@ -44,12 +44,12 @@ BRANCH = 10_000
 
 
 class Plan(NamedTuple):
-    """What a sweep draws.
+    """What an average or a sweep draws.
 
     Attributes
     ----------
     values : ndarray, shape (M,), float64
-        Densities, multiples of the half-width, or separations.
+        Densities, multiples of the half-width, or separations; empty for an average.
     draws : tuple of Draw
         Units of work, in the order in which they help most.
     point_of : tuple of int
@@ -65,17 +65,52 @@ class Plan(NamedTuple):
 
 
 def realisations(setup: Setup) -> int:
-    """Sprinklings to draw; there is only one set of imported points."""
+    """Sprinklings to draw.
+
+    Parameters
+    ----------
+    setup : Setup
+        Its point source and its averaging count.
+
+    Returns
+    -------
+    int
+        From 1 to 10 000; 1 for imported points, of which there is one set.
+    """
     return 1 if setup.points.kind == "file" else setup.averaging.sprinklings
 
 
 def placements(setup: Setup, regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]:
-    """The regions and their distinct mirror images, which are equivalent on a sprinkling."""
+    """The regions and their distinct mirror images, which are equivalent on a sprinkling.
+
+    Parameters
+    ----------
+    setup : Setup
+        Its kind of points decides.
+    regions : tuple of Region
+        One layout.
+
+    Returns
+    -------
+    tuple of tuple of Region
+        One to four layouts, the given one first; it alone for imported points.
+    """
     return (regions,) if setup.points.kind == "file" else mirror_images(regions)
 
 
 def average_draws(setup: Setup) -> Plan:
-    """Draws of the average at the present geometry."""
+    """Draws of the average at the present geometry.
+
+    Parameters
+    ----------
+    setup : Setup
+        What is averaged.
+
+    Returns
+    -------
+    Plan
+        One draw for each sprinkling, with all placements.
+    """
     layouts = placements(setup, setup.regions())
     draws = tuple(Draw(config=setup.config(r), layouts=layouts) for r in range(realisations(setup)))
     return Plan(np.empty(0), draws, (), ())
@@ -85,6 +120,17 @@ def density_draws(setup: Setup) -> Plan:
     """Draws of the density ladder at fixed geometry, one sprinkling each.
 
     Every rung has sprinklings of its own, so that its points are independent.
+
+    Parameters
+    ----------
+    setup : Setup
+        Its geometry, rules and density ladder.
+
+    Returns
+    -------
+    Plan
+        The first sprinkling of every rung, then the second, ...; rungs that the mass or the dense
+        route refuses are left out, and imported points have none.
     """
     plan = setup.sweeps
     ladder = np.geomspace(plan.density_low, plan.density_high, plan.density_points)
@@ -117,7 +163,25 @@ def density_draws(setup: Setup) -> Plan:
 
 
 def scaled(regions: tuple[Region, ...], factor: float) -> tuple[Region, ...]:
-    """All regions scaled about the patch's centre, or about the corner that they touch."""
+    """All regions scaled about the patch's centre, or about the corner that they touch.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout; of several touched corners the first of left, right, future, past counts.
+    factor : float
+        Multiple of sizes and gaps, > 0.
+
+    Returns
+    -------
+    tuple of Region
+        In the order given; whether they fit in the patch is not checked.
+
+    Raises
+    ------
+    InputError
+        If a half-width leaves (0, 1].
+    """
     fixed_t, fixed_x = 0.0, 0.0
     for t, x in ((0.0, -1.0), (0.0, 1.0), (1.0, 0.0), (-1.0, 0.0)):
         if any(abs(t - ct) + abs(x - cx) < 1e-9 for region in regions for ct, cx in region.corners):
@@ -139,6 +203,17 @@ def size_draws(setup: Setup) -> Plan:
 
     The scaling keeps the patch's centre, or the patch's corner when a region touches one, so that
     ratios of sizes and gaps do not change; every sprinkling serves all sizes.
+
+    Parameters
+    ----------
+    setup : Setup
+        Its geometry and its range of sizes.
+
+    Returns
+    -------
+    Plan
+        One draw for each sprinkling, with the placements of every size in turn; sizes that do not
+        fit in the patch are left out.
     """
     plan, regions = setup.sweeps, setup.regions()
     kept, left_out = [], []
@@ -162,7 +237,19 @@ def size_draws(setup: Setup) -> Plan:
 
 
 def separation_draws(setup: Setup) -> Plan:
-    """Draws of the separation sweep at fixed density and size, from touching to what fits."""
+    """Draws of the separation sweep at fixed density and size, from touching to what fits.
+
+    Parameters
+    ----------
+    setup : Setup
+        Its regions and its number of separations.
+
+    Returns
+    -------
+    Plan
+        One draw for each sprinkling, with the placements of every separation in turn; separations
+        at which the regions do not fit are left out, and one region has none.
+    """
     regions = setup.regions()
     if len(regions) < 2:
         return Plan(np.empty(0), (), (), ("one region has no separation",))

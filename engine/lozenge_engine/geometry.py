@@ -39,7 +39,13 @@ SLACK = 1e-12
 
 
 class Extent(NamedTuple):
-    """Ranges of a region in the light-cone coordinates."""
+    """Ranges of a region in the light-cone coordinates.
+
+    Attributes
+    ----------
+    u_low, u_high, v_low, v_high : float
+        Ends, in patch half-widths.
+    """
 
     u_low: float
     u_high: float
@@ -128,7 +134,18 @@ class Region:
 
 
 def region_letter(index: int) -> str:
-    """Name of the region at `index` (0-based): A, B, C, ..."""
+    """Name of a region.
+
+    Parameters
+    ----------
+    index : int
+        0 to 7.
+
+    Returns
+    -------
+    str
+        A to H.
+    """
     return "ABCDEFGH"[index]
 
 
@@ -277,17 +294,50 @@ def equal_row(count: int, half_width: float, separation: float) -> tuple[Region,
 
 
 def largest_separation(count: int, half_width: float) -> float:
-    """Largest gap at which `count` equal regions fit in a row (negative: none does)."""
+    """Largest gap at which equal regions fit in a row.
+
+    Parameters
+    ----------
+    count, half_width : int, float
+        Of the row, as in `equal_row`.
+
+    Returns
+    -------
+    float
+        In patch half-widths; negative where no gap fits, infinite for one region.
+    """
     return math.inf if count == 1 else (2.0 - 2.0 * count * half_width) / (count - 1)
 
 
 def largest_half_width(count: int, separation: float) -> float:
-    """Largest half-width at which `count` equal regions at this gap fit in a row."""
+    """Largest half-width at which equal regions fit in a row.
+
+    Parameters
+    ----------
+    count, separation : int, float
+        Of the row, as in `equal_row`.
+
+    Returns
+    -------
+    float
+        In patch half-widths; not positive where none fits.
+    """
     return (2.0 - (count - 1) * separation) / (2.0 * count)
 
 
 def gaps(regions: tuple[Region, ...]) -> tuple[float, ...]:
-    """Gaps in x between the neighbouring corners of regions taken from left to right."""
+    """Gaps in x between the neighbouring corners of regions taken from left to right.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        In any order.
+
+    Returns
+    -------
+    tuple of float
+        One fewer than regions; >= 0 up to rounding where these are spacelike.
+    """
     row = sorted(regions, key=lambda r: r.x0)
     return tuple((b.x0 - b.reach) - (a.x0 + a.reach) for a, b in itertools.pairwise(row))
 
@@ -338,9 +388,17 @@ def with_separation(regions: tuple[Region, ...], separation: float) -> tuple[Reg
 
 
 def largest_mean_gap(regions: tuple[Region, ...]) -> float:
-    """Largest mean gap of a list of regions that keeps them in the patch, by bisection.
+    """Largest mean gap of a list of regions that `check_regions` takes, by bisection.
 
-    0 for a single region.
+    Parameters
+    ----------
+    regions : tuple of Region
+        Regions that `check_regions` takes as they are.
+
+    Returns
+    -------
+    float
+        In patch half-widths; 0 for a single region.
     """
     if len(regions) < 2:
         return 0.0
@@ -360,7 +418,17 @@ def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]
     """All distinct mirror images (x -> -x, t -> -t) of a set of regions, itself first.
 
     A reflection keeps letters, so image i of region A is what A becomes; images whose sets of
-    diamonds coincide are equivalent only if each letter keeps its size, and are then left out.
+    diamonds coincide are left out.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout.
+
+    Returns
+    -------
+    tuple of tuple of Region
+        One to four layouts.
     """
     images: list[tuple[Region, ...]] = []
     seen: set[frozenset[tuple[float, float, float, float]]] = set()

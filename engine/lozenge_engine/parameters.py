@@ -36,9 +36,10 @@ class Limits(NamedTuple):
     Attributes
     ----------
     separation_high, half_width_high : float
-        Largest values at which the regions fit.
+        Largest values at which the regions fit, in patch half-widths; a list has no common
+        half-width, and 1 stands there.
     region_count_high : int
-        Most regions that fit in a row at the present size and separation.
+        Most regions that fit in a row at the present size and separation; those of a list.
     reasons : dict of str to str
         For each parameter that has no effect now, the reason.
     """
@@ -50,7 +51,11 @@ class Limits(NamedTuple):
 
 
 class Parameters(param.Parameterized):
-    """What a user may set, as reactive parameters that compile to a `Setup`."""
+    """What a user may set, as reactive parameters that compile to a `Setup`.
+
+    Every parameter carries its own documentation.  Bounds that depend on other parameters are
+    checked by `setup`.
+    """
 
     density = param.Number(
         default=1250.0,
@@ -230,6 +235,11 @@ class Parameters(param.Parameterized):
         -------
         Config
             Checked.
+
+        Raises
+        ------
+        InputError
+            If the parameters do not fit together.
         """
         return self.setup().config()
 
@@ -240,6 +250,11 @@ class Parameters(param.Parameterized):
         -------
         Limits
             Largest values that fit, and why a control cannot act.
+
+        Raises
+        ------
+        InputError
+            If the parameters do not fit together.
         """
         if self.regions is None:
             count, half, gap = self.region_count, self.half_width, self.separation

@@ -53,7 +53,7 @@ DENSE_LIMIT = 4000
 """Most elements for which every mode is computed (no cut in the first stage)."""
 THREADS_FROM = 2500
 """Elements above which the search for modes uses all cores (or LOZENGE_THREADS of them)."""
-MARGIN = 0.9
+MARGIN = 0.95
 """Floor of the search, as a multiple of the patch's cut: what lies between is shown as dropped."""
 MARGIN_LIMIT = 20_000
 """Above this many elements the floor is the cut itself."""
@@ -89,11 +89,14 @@ def compute(
     ------
     InputError
         If the configuration cannot be computed on these points.
+    Cancelled
+        If `report` raises it.
 
     Notes
     -----
-    Cost: see `lozenge_engine.kernels.modes.find_modes`; the second stage adds about
-    8 n r**2 + 60 r**3 flops for each region, pair and union.
+    Cost: `lozenge_engine.kernels.modes.certified_modes`; the second stage adds 8 n r**2 flops for
+    each region and of the order of 100 r**3 for each region, pair, triple and union, r the kept
+    modes of the patch; less where a region holds n < 2 r elements.
     """
     with blas_threads(1):
         return _Computation(config, points, stages or Stages(), report).result()
@@ -309,7 +312,7 @@ class _Computation:
 
 
 def versions() -> dict[str, str]:
-    """Versions that a result may depend on."""
+    """Versions that a result may depend on: of Python, NumPy, SciPy and this program."""
     return {
         "python": platform.python_version(),
         **{name: metadata.version(name) for name in ("numpy", "scipy")},

@@ -19,7 +19,17 @@ MAX_BYTES = 100_000_000
 
 
 class PointFile(NamedTuple):
-    """Imported points, in natural order, with the name of their file and their hash."""
+    """Imported points.
+
+    Attributes
+    ----------
+    points : Coordinates
+        4 to 1 000 000 points in natural order.
+    name : str
+        Name of their file, without folders.
+    sha256 : str
+        `lozenge_engine.kernels.points.points_hash` of the points.
+    """
 
     points: Coordinates
     name: str
@@ -32,7 +42,8 @@ def read_points(path: Path) -> PointFile:
     Parameters
     ----------
     path : Path
-        Comma-separated, with a header that names columns t and x; others are ignored.
+        UTF-8, comma-separated, at most 100 MB, with a header that names columns t and x, in patch
+        half-widths; other columns are ignored.
 
     Returns
     -------

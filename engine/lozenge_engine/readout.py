@@ -21,7 +21,19 @@ AGREEMENT = 1e-6
 
 
 class Measured(NamedTuple):
-    """The fields that a region and a union have in common; see `RegionResult`."""
+    """The fields that a region and a union have in common.
+
+    Attributes
+    ----------
+    symplectic, contributions : ndarray, shape (k,), float64
+        As in `RegionResult`; empty where there is no entropy.
+    entropy : float
+        Sum of the contributions, in nats; NaN where there is none.
+    status : str
+        See `lozenge_engine.result.Status`.
+    note : str
+        The reason, when the status is not ``ok``; otherwise empty.
+    """
 
     symplectic: FloatArray
     contributions: FloatArray
@@ -48,10 +60,10 @@ def read(
         The operator's spectrum, for the check against other kernel tolerances.
     kept : ndarray of bool
         Its kept pairs.
-    g : ndarray, shape (2 r, 2 k)
-        From `gaussian.projected`.
+    g : ndarray, shape (2 r, 2 k), float64
+        From `gaussian.projected`, or several of them side by side.
     order : float
-        Renyi order.
+        Renyi order, >= 0.5.
     uncut : bool
         Whether the regions' rule is ``none``.
     elements : int
@@ -62,7 +74,13 @@ def read(
     Returns
     -------
     Measured
-        With status ``refused`` when the rank makes S = 0 whatever the points are.
+        With status ``refused`` when the rank makes S = 0 whatever the points are, and
+        ``undetermined`` when R is not positive definite on the space.
+
+    Notes
+    -----
+    Cost: `gaussian.symplectic`, once, and when uncut once more for each of three kernel
+    tolerances that keeps other pairs.
     """
     empty = np.empty(0)
     if uncut and rank is not None and elements >= rank:

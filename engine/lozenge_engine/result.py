@@ -22,7 +22,8 @@ BoolArray = NDArray[np.bool_]
 
 Status = Literal["ok", "refused", "undetermined", "out_of_range"]
 """``refused``: rank makes S = 0 and no number is given; ``undetermined``: S depends on the
-kernel tolerance; ``out_of_range``: a symplectic value lies below 1/2 by more than rounding."""
+kernel tolerance (NaN where R is singular); ``out_of_range``: a symplectic value lies below 1/2 by
+more than rounding."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -36,13 +37,14 @@ class PatchSpectrum:
     kept : ndarray, shape (found,), bool
         Which of them the first stage keeps.
     cut : float
-        Threshold of the first stage; 0 for the rule ``none``.
+        Threshold of the first stage; 0 for ``none``, the smallest kept eigenvalue for
+        ``fixed_number``.
     nominal_modes : float
         2 sqrt(N), the continuum count above the default threshold.
     floor : float
         Every eigenvalue above it was found, as far as the certificate says.
     krylov_dimension : int
-        Dimension of the space searched; N on the dense route.
+        Dimension of the spaces searched, in all; N on the dense route.
     """
 
     eigenvalues: FloatArray
@@ -68,20 +70,22 @@ class RegionResult:
         Its geometry.
     elements : int
         Elements inside, n.
-    eigenvalues : ndarray, shape (rank,), float64
-        Positive eigenvalues of the restricted operator, descending.
-    kept : ndarray, shape (rank,), bool
+    eigenvalues : ndarray, shape (pairs,), float64
+        Positive eigenvalues of the restricted operator, descending; pairs = min(n, 2 r) // 2 with
+        r kept modes of the patch.
+    kept : ndarray, shape (pairs,), bool
         Which of them the second stage keeps.
     cut : float
-        Threshold of the second stage.
+        Threshold of the second stage; 0 for ``none`` and ``fixed_number``.
     nominal_modes : float
         2 sqrt(n).
-    symplectic : ndarray, shape (kept,), float64
-        Symplectic values s >= 1/2, descending.
-    contributions : ndarray, shape (kept,), float64
+    symplectic : ndarray, shape (k,), float64
+        Symplectic values s >= 1/2 up to rounding, descending, one for each kept mode; empty
+        without an entropy.
+    contributions : ndarray, shape (k,), float64
         What each of them adds to the entropy, in nats.
     entropy : float
-        In nats; NaN when refused.
+        Of the order asked for, in nats; NaN when refused, or undetermined without a value.
     status : str
         See `Status`.
     note : str
@@ -110,8 +114,23 @@ class RegionResult:
 class UnionResult:
     """A union of regions under one of the two union rules.
 
-    `members` are indices of regions; the other fields read as those of `RegionResult`.
-    Under ``direct_sum`` the eigenvalues are those of the kept block, all of them kept.
+    Parameters
+    ----------
+    rule : {"support", "direct_sum"}
+        The rule.
+    members : tuple of int
+        Indices of the regions.
+    eigenvalues : ndarray, shape (pairs,), float64
+        Positive eigenvalues of the union's operator, descending; under ``direct_sum`` those that
+        the regions keep.
+    kept : ndarray, shape (pairs,), bool
+        Which of them count; under ``direct_sum`` all.
+    symplectic, contributions : ndarray, shape (k,), float64
+        As in `RegionResult`.
+    entropy : float
+        In nats; NaN as in `RegionResult`.
+    status, note : str
+        As in `RegionResult`.
     """
 
     rule: Literal["support", "direct_sum"]
@@ -134,8 +153,19 @@ class UnionResult:
 class Pair:
     """Mutual information of two regions, S_A + S_B - S_AB, in nats, under both union rules.
 
-    `cross_block` is the spectral norm of the commutator's block between the two kept spaces,
-    scaled by both diagonal blocks (0 would mean that the regions' kept modes commute).
+    Parameters
+    ----------
+    a, b : int
+        Indices of the regions, a < b.
+    gap : float
+        Distance in x between the neighbouring corners, in patch half-widths.
+    support, direct_sum : float
+        Per union rule, in nats; no theorem makes them positive here.
+    cross_block : float
+        Spectral norm of the commutator's block between the two kept spaces, scaled by both
+        diagonal blocks (0 would mean that the regions' kept modes commute).
+    status : str
+        The first mark on one of the entropies, or ``ok``; see `Status`.
     """
 
     a: int
@@ -149,7 +179,15 @@ class Pair:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Triple:
-    """Tripartite information S_A + S_B + S_C - S_AB - S_BC - S_CA + S_ABC, in nats."""
+    """Tripartite information S_A + S_B + S_C - S_AB - S_BC - S_CA + S_ABC, in nats.
+
+    Parameters
+    ----------
+    members : tuple of int
+        Indices of the three regions.
+    support, direct_sum : float
+        Per union rule.
+    """
 
     members: tuple[int, int, int]
     support: float
@@ -165,11 +203,11 @@ class Result:
     config : Config
         What was asked.
     u, v : ndarray, shape (N,), float64
-        Light-cone coordinates of the elements, in the order of the point stream.
+        Light-cone coordinates of the elements, u ascending.
     region_of : ndarray, shape (N,), int8
         Index of the region that holds an element, -1 for none.
     points_sha256 : str
-        Hash of the point set.
+        `lozenge_engine.kernels.points.points_hash` of them.
     patch : PatchSpectrum
         First stage.
     certificate : Certificate
@@ -178,14 +216,14 @@ class Result:
         Second stage, in the order of the letters.
     unions : mapping of str to UnionResult
         Keys ``support`` and ``direct_sum``; empty for one region.
-    pairs, triples : tuple
-        All pairs; all neighbouring triples.
+    pairs, triples : tuple of Pair, tuple of Triple
+        All pairs; all triples of consecutive letters.
     total_correlation : mapping of str to float
-        sum of S minus S of the union, per union rule; empty for one region.
+        Sum of S minus S of the union, in nats, per union rule; empty for one region.
     seconds : mapping of str to float
-        Wall time of each stage, 0 where the cache served it.
+        Wall time of each stage, next to 0 where the cache served it.
     versions : mapping of str to str
-        Of Python and the libraries.
+        Of Python, the libraries and this program.
     """
 
     config: Config

@@ -30,7 +30,7 @@ class Draw:
     Parameters
     ----------
     config : Config
-        The sprinkling and the rules; its own regions are those of the first layout.
+        The sprinkling and the rules; each layout in turn replaces its regions.
     layouts : tuple of tuple of Region
         One or more sets of regions.
     """
@@ -40,7 +40,7 @@ class Draw:
 
     @property
     def key(self) -> str:
-        """Hash of everything that the readings depend on."""
+        """SHA-256, in hexadecimal, of everything that the readings depend on."""
         rest = json.dumps(
             [[asdict(region) for region in layout] for layout in self.layouts],
             sort_keys=True,
@@ -61,7 +61,8 @@ class Reading(NamedTuple):
     union_support, union_direct_sum : float
         Entropy of all regions together; of the region itself for K = 1.
     pair_support, pair_direct_sum, cross_block : ndarray, shape (K (K - 1)/2,), float64
-        Mutual information of each pair, and the norm of its cross block.
+        Mutual information of each pair a < b in lexicographic order, and the norm of its cross
+        block.
     trusted : bool
         Whether the certificate holds and no number carries a mark.
     """
@@ -78,7 +79,18 @@ class Reading(NamedTuple):
 
 
 def reading_of(result: Result) -> Reading:
-    """The numbers of a result that averages are made of."""
+    """The numbers of a result that averages are made of.
+
+    Parameters
+    ----------
+    result : Result
+        K regions on one sprinkling.
+
+    Returns
+    -------
+    Reading
+        Of its regions, pairs and union.
+    """
     first = result.regions[0].entropy
     unions = result.unions
     return Reading(
@@ -123,6 +135,12 @@ def take(
     ------
     InputError
         If a layout cannot be computed on this sprinkling.
+    Cancelled
+        If `report` raises it.
+
+    Notes
+    -----
+    Cost: the patch's modes once, the second stage of `compute` for each layout.
     """
     stages = stages or Stages()
     return tuple(

@@ -22,7 +22,7 @@ class Stages:
     Parameters
     ----------
     limit_bytes : int
-        Arrays kept, at most; the newest entry always stays.
+        Bytes of arrays kept, at most; the newest entry always stays.
     compiled : bool
         Whether compiled loops may be used where the result is the same to the bit; set it once
         `lozenge_engine.kernels.order.warm` has returned.
@@ -38,6 +38,20 @@ class Stages:
         """Value of a key, made if it is missing, and whether the cache served it.
 
         Two threads may make the same value at once; both get an equal one.
+
+        Parameters
+        ----------
+        key : hashable
+            Names everything that the value depends on.
+        make : callable
+            Makes the value; its arrays, also in nested tuples, become read-only.
+
+        Returns
+        -------
+        value : object
+            What the key stands for.
+        cached : bool
+            Whether it was there.
         """
         with self._lock:
             if key in self._entries:
@@ -49,7 +63,15 @@ class Stages:
         return value, False
 
     def put(self, key: Hashable, value: object) -> None:
-        """Store a value, dropping the least recently used ones beyond the limit."""
+        """Store a value, dropping the least recently used ones beyond the limit.
+
+        Parameters
+        ----------
+        key : hashable
+            Names everything that the value depends on.
+        value : object
+            Its arrays, also in nested tuples, become read-only and count by their bytes.
+        """
         _freeze(value)
         with self._lock:
             self._entries[key] = (value, _array_bytes(value))
@@ -59,7 +81,18 @@ class Stages:
                 total -= self._entries.popitem(last=False)[1][1]
 
     def peek(self, key: Hashable) -> Any | None:
-        """Value of a key, or None."""
+        """Value of a key, which counts as a use, or None.
+
+        Parameters
+        ----------
+        key : hashable
+            As in `put`.
+
+        Returns
+        -------
+        object or None
+            The value.
+        """
         with self._lock:
             if key not in self._entries:
                 return None

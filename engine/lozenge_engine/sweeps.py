@@ -79,19 +79,19 @@ class ScalingCurve:
         Density or multiple of the half-width; ln(l/a), the mean over regions; expected elements
         of the smallest region.
     entropy : tuple of Estimate
-        Of all regions together (support rule), length M.
+        Of all regions together (support rule), in nats, length M.
     regions_entropy : ndarray, shape (M, K), float64
-        Mean entropy of each region.
+        Mean entropy of each region, in nats; NaN where nothing is known yet.
     used : ndarray, shape (M,), bool
-        Which points the fit uses.
+        Which points the fit uses: those with readings and a large enough smallest region.
     fit : Fit or None
-        None until errors are known.
+        None with fewer than three points, and until errors are known.
     note : str
-        Why there is no fit, or what to be careful about.
+        Why there is no fit; empty with one.
     reference_slope : float or None
-        Calabrese-Cardy slope, for the density ladder only.
+        Calabrese-Cardy slope, for the massless density ladder only.
     done, planned : int
-        Draws.
+        Draws that are done, failed ones included, and all draws.
     left_out : tuple of str
         What cannot be drawn, and why.
     """
@@ -124,17 +124,17 @@ class SeparationCurve:
     Parameters
     ----------
     separation : ndarray, shape (M,), float64
-        Gap, in patch half-widths.
+        Gap (mean gap of a list), in patch half-widths.
     pair : tuple of int
-        The nearest pair.
+        The nearest pair at the present separation; (0, 0) for one region.
     union, mutual_information : mapping of str to tuple of Estimate
-        Per union rule, length M.
+        In nats, per union rule, length M; of all regions, and of the nearest pair.
     cross_block : ndarray, shape (M,), float64
-        Mean norm of the pair's cross block.
+        Mean norm of the pair's cross block; NaN where nothing is known yet.
     done, planned : int
-        Draws.
+        Draws that are done, failed ones included, and all draws.
     note : str
-        Why there is no curve.
+        What was left out, and why; otherwise empty.
     """
 
     separation: FloatArray
@@ -154,7 +154,18 @@ def _abscissa(regions: tuple[Region, ...], density: float) -> tuple[float, float
 
 
 def ends_inside(regions: tuple[Region, ...]) -> int:
-    """Left and right corners of regions inside the patch; shared corners do not count."""
+    """Left and right corners of regions inside the patch; shared corners do not count.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout, K regions.
+
+    Returns
+    -------
+    int
+        From 0 to 2 K: the ends that `calabrese_cardy_slope` counts.
+    """
     corners = [(r.corners[1], r.corners[3]) for r in regions]
     flat = [c for pair in corners for c in pair]
     inside = 0
@@ -178,7 +189,7 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
     Returns
     -------
     ScalingCurve
-        With the Calabrese-Cardy slope for its regime.
+        With the Calabrese-Cardy slope of the massless field; without one for a massive field.
     """
     plan, regions = density_draws(setup), setup.regions()
     rungs: list[list[tuple[Reading, ...]]] = [[] for _ in plan.values]
@@ -332,6 +343,17 @@ def separation_curve(setup: Setup, readings: Readings) -> SeparationCurve:
 
 
 def nearest_pair(regions: tuple[Region, ...]) -> tuple[int, int]:
-    """Indices of the two regions with the smallest gap; (0, 0) for one region."""
+    """Indices of the two regions with the smallest gap in x; (0, 0) for one region.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout.
+
+    Returns
+    -------
+    tuple of int
+        Ascending; of equal gaps the first in lexicographic order.
+    """
     pairs = [(a, b) for a in range(len(regions)) for b in range(a + 1, len(regions))]
     return min(pairs, key=lambda p: gaps((regions[p[0]], regions[p[1]]))[0], default=(0, 0))

@@ -38,7 +38,13 @@ def blas_threads(count: int | None) -> Iterator[None]:
     Parameters
     ----------
     count : int or None
-        Threads for NumPy's BLAS; None leaves it as it is.
+        Threads for NumPy's BLAS, >= 1; None for as many as before all open requests.
+
+    Yields
+    ------
+    None
+        The numbers hold for the whole process; the latest open request wins, and what was there
+        before comes back when the last one closes.
     """
     libraries = [x for x in _controller().lib_controllers if x.user_api == "blas"]
     entry = (object(), count)

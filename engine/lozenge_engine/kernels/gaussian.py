@@ -62,7 +62,7 @@ class Symplectic(NamedTuple):
     values : ndarray, shape (k,), float64
         s >= 1/2 up to rounding, descending.
     tolerance : float
-        How far below 1/2 rounding can bring a value: 8 d eps cond(R).
+        How far below 1/2 rounding can bring a value: 8 d eps cond(R), R scaled to unit diagonal.
     lowest : float
         The smallest value found, before anything was done to it.
     """
@@ -156,6 +156,10 @@ def projected(spectrum: Spectrum, kept: NDArray[np.bool_]) -> FloatArray:
     -------
     ndarray, shape (2 r, 2 k), float64
         Columns of the a vectors, then of the b vectors.
+
+    Notes
+    -----
+    Cost: 8 d r k flops, d rows of the factor.
     """
     basis = np.hstack([spectrum.pairs.a[:, kept], spectrum.pairs.b[:, kept]])
     return np.asarray(spectrum.factor.T @ basis, dtype=np.float64)
@@ -208,7 +212,7 @@ def symplectic(g: FloatArray) -> Symplectic:
 
     Notes
     -----
-    Cost: 4 r d**2 + 5 d**3 flops.
+    Cost: about 6 r d**2 + 10 d**3 flops.
     """
     d = g.shape[1]
     if d == 0:
@@ -264,8 +268,8 @@ def cross_block(g_a: FloatArray, g_b: FloatArray) -> float:
 
     Parameters
     ----------
-    g_a, g_b : ndarray, shape (2 r, 2 k)
-        From `projected`.
+    g_a, g_b : ndarray, shape (2 r, 2 k_a) and (2 r, 2 k_b), float64
+        From `projected`, in the same basis of the patch's modes.
 
     Returns
     -------

@@ -43,7 +43,19 @@ PANEL_OVERLAP = 1e-3
 
 
 class Space(NamedTuple):
-    """A Krylov space: orthonormal `basis[:, :size]`, `coupling` (one more than size - 1)."""
+    """A Krylov space of a skew A, and room to grow.
+
+    Attributes
+    ----------
+    basis : ndarray, shape (n, capacity), float64, Fortran order
+        Orthonormal columns q_k in the first `size`; the rest is not set.
+    coupling : ndarray, shape (capacity,), float64
+        beta_k > 0 in the first size - 1: A q_k = beta_k q_(k+1) - beta_(k-1) q_(k-1).
+    size : int
+        Dimension.
+    exhausted : bool
+        Whether the space is invariant under A, up to rounding.
+    """
 
     basis: FloatArray
     coupling: FloatArray
@@ -52,7 +64,20 @@ class Space(NamedTuple):
 
 
 def start_vector(n: int, seed: int) -> FloatArray:
-    """Deterministic vector with entries uniform in (-1/2, 1/2), from raw 64-bit output."""
+    """Deterministic vector with entries uniform in [-1/2, 1/2), from raw 64-bit output.
+
+    Parameters
+    ----------
+    n : int
+        Number of entries.
+    seed : int
+        Seed of the generator, >= 0.
+
+    Returns
+    -------
+    ndarray, shape (n,), float64
+        Bit-identical on every platform; not normalised.
+    """
     raw = np.random.PCG64(np.random.SeedSequence([seed, 0x4B52])).random_raw(n)
     return np.asarray((raw >> np.uint64(11)) * 2.0**-53 - 0.5, dtype=np.float64)
 
@@ -67,7 +92,24 @@ def _orthogonalised(x: FloatArray, *blocks: FloatArray) -> FloatArray:
 
 
 def begin(n: int, deflate: FloatArray, *, capacity: int, seed: int) -> Space:
-    """Space of dimension 1 from a fresh vector."""
+    """Space of dimension 1 from a fresh vector.
+
+    Parameters
+    ----------
+    n : int
+        Size of the operator.
+    deflate : ndarray, shape (n, d), float64
+        Orthonormal columns that the space stays orthogonal to; d < n, 0 allowed.
+    capacity : int
+        Vectors to make room for, >= 1: 8 n capacity bytes.
+    seed : int
+        Of `start_vector`.
+
+    Returns
+    -------
+    Space
+        Its one vector is orthogonal to `deflate`.
+    """
     basis = np.empty((n, capacity), order="F")
     basis[:, 0] = _orthogonalised(start_vector(n, seed), deflate)
     return Space(basis, np.zeros(capacity), 1, exhausted=False)
@@ -142,7 +184,32 @@ def _attach(
 def grown(
     operator: Commutator, run: Space, deflate: FloatArray, *, to: int, report: Report
 ) -> Space:
-    """Extend a Krylov space to dimension `to`, or until it is invariant."""
+    """Extend a Krylov space to dimension `to`, or until it is invariant.
+
+    Parameters
+    ----------
+    operator : Commutator
+        Applies A, of size n.
+    run : Space
+        The space; its arrays are written to and may be shared with the result.
+    deflate : ndarray, shape (n, d), float64
+        As in `begin`.
+    to : int
+        Wanted dimension m; at most n - d is reached.
+    report : callable
+        Called with the fraction done after every panel; may raise to stop.
+
+    Returns
+    -------
+    Space
+        Of dimension m, or exhausted.
+
+    Notes
+    -----
+    Cost from dimension 1: m applications of A and about n (2 m**2 + 4 m d + 256 m) flops: the
+    panel against everything (once more when the overlap exceeds 1e-3), and each vector against
+    the 64 leading ones.
+    """
     n = run.basis.shape[0]
     to = min(to, n - deflate.shape[1])
     run = _with_capacity(run, to)
@@ -214,7 +281,31 @@ def settled(
     dimension: int,
     report: Report,
 ) -> tuple[Space, SkewPairs]:
-    """Grow a space until every Ritz pair above the floor has converged."""
+    """Grow a space until every Ritz pair above the floor has converged.
+
+    Parameters
+    ----------
+    operator : Commutator
+        Applies A, of size n.
+    run : Space
+        The space; its arrays are written to.
+    deflate : ndarray, shape (n, d), float64
+        As in `begin`.
+    floor : float
+        Bound > 0 on the eigenvalues of i A.
+    dimension : int
+        Dimension to look at first; then 5 % and at least 16 more at a time.
+    report : callable
+        As in `grown`.
+
+    Returns
+    -------
+    run : Space
+        The grown space.
+    pairs : SkewPairs
+        Ritz pairs above the floor, in the coordinates of the space; each residual is at most
+        `residual_goal`, unless the space is exhausted.
+    """
     while True:
         run = grown(operator, run, deflate, to=dimension, report=report)
         pairs, residuals = _ritz(run, _last_coupling(operator, run), floor)
@@ -225,12 +316,42 @@ def settled(
 
 
 def residual_goal(floor: float, top: float) -> float:
-    """Residual at which a pair counts as converged: 1e-10 of the floor, or rounding."""
+    """Residual at which a pair counts as converged: 1e-10 of the floor, or rounding.
+
+    Parameters
+    ----------
+    floor : float
+        Lowest eigenvalue looked for.
+    top : float
+        Largest eigenvalue found.
+
+    Returns
+    -------
+    float
+        The larger of 1e-10 floor and 30 eps top.
+    """
     return max(1e-10 * floor, 30.0 * EPS * top)
 
 
 def lifted(run: Space, pairs: SkewPairs) -> FloatArray:
-    """Ritz vectors on the points, columns a_0, b_0, a_1, ...; parity halves the products."""
+    """Ritz vectors on the points; a lives on even Krylov vectors and b on odd ones.
+
+    Parameters
+    ----------
+    run : Space
+        Of dimension m, on n points.
+    pairs : SkewPairs
+        r pairs from `settled`.
+
+    Returns
+    -------
+    ndarray, shape (n, 2 r), float64, Fortran order
+        Columns a_0, b_0, a_1, ...
+
+    Notes
+    -----
+    Cost: 2 n m r flops, 16 n r bytes.
+    """
     n, r = run.basis.shape[0], pairs.values.size
     vectors = np.empty((n, 2 * r), order="F")
     even, odd = run.basis[:, 0 : run.size : 2], run.basis[:, 1 : run.size : 2]
@@ -243,5 +364,18 @@ def lifted(run: Space, pairs: SkewPairs) -> FloatArray:
 
 
 def ritz_values(space: Space, *, above: float) -> FloatArray:
-    """Ritz values above a bound, descending, converged or not."""
+    """Ritz values above a bound, converged or not.
+
+    Parameters
+    ----------
+    space : Space
+        Of dimension m.
+    above : float
+        Bound > 0.
+
+    Returns
+    -------
+    ndarray, float64
+        Descending.
+    """
     return tridiagonal_pairs(space.coupling[: space.size - 1], above=above).values

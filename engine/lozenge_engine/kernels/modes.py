@@ -146,7 +146,7 @@ def find_modes(
 
     Notes
     -----
-    Cost for r modes: dimension m = 3.6 r, about 2 N m**2 flops in panels of 8 and 4 N m r for
+    Cost for r modes: dimension m = 3.6 r, about 2 N m**2 flops in panels of 8 and 2 N m r for
     the vectors; 8 N (m + 2 r) bytes.  Massless at the default threshold r = 2 sqrt(N), so that
     the cost grows as N**2 and the memory as N**1.5.
     """
@@ -183,8 +183,14 @@ def certified_modes(
 
     Parameters
     ----------
-    operator, floor, known, report
-        As in `find_modes`.
+    operator : Commutator
+        Applies the real skew A, i Delta = i A, of size N.
+    floor : float
+        Threshold > 0 on the eigenvalues of i Delta.
+    known : Modes or None
+        Modes found earlier; the search is deflated against them and adds to them.
+    report : callable
+        Called with a fraction in [0, 1]; may raise to stop.
 
     Returns
     -------
@@ -192,6 +198,10 @@ def certified_modes(
         Descending.
     Certificate
         Of these modes; not met if `MAX_STARTS` start vectors did not suffice.
+
+    Notes
+    -----
+    Cost: `find_modes` and `certify`, once when no eigenvalue is multiple.
     """
     most = MAX_STARTS + (known.starts if known is not None else 0)
     modes = find_modes(operator, floor=floor, known=known, report=_part_of(report, 0.0, 0.7))

@@ -28,7 +28,8 @@ def v_order(u: ArrayLike, v: ArrayLike) -> tuple[Indices, Indices]:
     Raises
     ------
     InputError
-        If u is not ascending, a value of u or v stands twice, or is not finite.
+        If the arrays are empty or not of one shape (n,), u is not ascending, or a value of u or v
+        stands twice or is not finite.
     """
     u, v = (np.asarray(w, dtype=np.float64) for w in (u, v))
     if u.ndim != 1 or u.shape != v.shape or not u.size:

@@ -43,7 +43,8 @@ class Fit(NamedTuple):
     slope, slope_error, intercept, intercept_error : float
         Values and standard errors.
     chi2 : float
-        Weighted sum of squared residuals, from the samples' own (co)variance; NaN if unknown.
+        Weighted sum of squared residuals, from the samples' own (co)variance (Hotelling's T**2
+        for shared sprinklings); NaN if unknown.
     dof : int
         Points minus two.
     p_value : float
@@ -108,7 +109,8 @@ def fit_independent(x: FloatArray, samples: list[FloatArray]) -> Fit | None:
     Returns
     -------
     Fit or None
-        None with fewer than three points or without a spare sample: no error would be known.
+        None with fewer than three points, a point without samples, no spread in x, or without a
+        spare sample: no error would be known.
 
     Notes
     -----
@@ -156,7 +158,7 @@ def fit_shared(x: FloatArray, samples: FloatArray) -> Fit | None:
     Returns
     -------
     Fit or None
-        None with fewer than three points or two sprinklings.
+        None with fewer than three points or two sprinklings, or without a spread in x.
 
     Notes
     -----

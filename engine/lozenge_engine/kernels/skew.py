@@ -42,8 +42,9 @@ def _phases(count: int) -> FloatArray:
 def tridiagonal_pairs(coupling: FloatArray, *, above: float) -> SkewPairs:
     """Pairs of a skew tridiagonal matrix whose eigenvalue exceeds a bound.
 
-    Up to the phases i**k the matrix is symmetric tridiagonal with zero diagonal, which
-    LAPACK's ``stemr`` solves for the wanted part of the spectrum only.
+    Up to the phases i**k the matrix is symmetric tridiagonal with zero diagonal, which LAPACK's
+    ``stebz`` (bisection) and ``stein`` (inverse iteration) solve for the wanted part of the
+    spectrum only.
 
     Parameters
     ----------
@@ -59,7 +60,8 @@ def tridiagonal_pairs(coupling: FloatArray, *, above: float) -> SkewPairs:
 
     Notes
     -----
-    Cost: O(m r) flops, 16 m r bytes.
+    Cost: O(m r) flops while the eigenvalues are well apart, up to O(m r**2) in clusters, which
+    ``stein`` orthogonalises; 16 m r bytes.
     """
     m = coupling.size + 1
     # Every eigenvalue is below twice the largest coupling (Gershgorin).
@@ -121,7 +123,7 @@ def singular_values_of_pairs(matrix: FloatArray) -> FloatArray:
     Returns
     -------
     ndarray, shape (n // 2,), float64
-        The mean of each pair.
+        The mean of each pair, descending.
     """
     n = matrix.shape[0] // 2
     values = scipy.linalg.svdvals(matrix, check_finite=False)[: 2 * n]
