@@ -12,10 +12,11 @@ from numpy.typing import NDArray
 
 from lozenge_engine.config import Config, PointSource, Setup
 from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.geometry import PATCH_AREA, Region, gaps
+from lozenge_engine.geometry import PATCH_AREA, Region
 from lozenge_engine.kernels.laws import diamond_eigenvalues
-from lozenge_engine.parameters import Limits, Parameters
+from lozenge_engine.parameters import Limits, Parameters, allowed_values
 from lozenge_engine.pipeline import compute
+from lozenge_engine.placement import gaps
 from lozenge_engine.pointfile import PointFile
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
@@ -78,11 +79,15 @@ class Bench(Parameters):
         """Set a parameter; when its own bounds refuse it, undo a half-done update as well."""
         try:
             super().__setattr__(name, value)
-        except ValueError:
+        except ValueError as error:
             if not getattr(self, "_quiet", True):
                 with self._silent(), param.parameterized.discard_events(self):
                     self.param.update(**self._settled)
-            raise
+            if isinstance(error, InputError):
+                raise
+            raise refuse(
+                name, given=value, allowed=allowed_values(self, name), do=f"change {name}"
+            ) from error
 
     def _use_file(self, points: PointFile) -> None:
         """Take imported points, whose density is N/2."""

@@ -15,15 +15,8 @@ from typing import Any, Literal
 
 from lozenge_engine.checks import checked_number, checked_whole
 from lozenge_engine.errors import refuse
-from lozenge_engine.geometry import (
-    MAX_REGIONS,
-    PATCH_AREA,
-    Region,
-    check_regions,
-    equal_row,
-    gaps,
-    with_separation,
-)
+from lozenge_engine.geometry import MAX_REGIONS, PATCH_AREA, Region, check_regions, equal_row
+from lozenge_engine.placement import gaps, with_separation
 
 __all__ = [
     "MAX_ELEMENTS",

@@ -81,13 +81,18 @@ class CostModel:
 
     def __init__(self) -> None:
         self._rates: tuple[float, float] | None = None
-        self._correction: dict[int, float] = {}
+        self._correction: dict[tuple[int, bool, str], float] = {}
 
     def _calibrated(self) -> tuple[float, float]:
         """Flops per second with the basis in cache, and out of it."""
         if self._rates is None:
             self._rates = (_rate_in_cache(), _rate_in_memory())
         return self._rates
+
+    @property
+    def calibrated(self) -> bool:
+        """Whether this machine was measured; until then nothing can be learnt."""
+        return self._rates is not None
 
     def predict(self, config: Config) -> Prediction:
         """Predict a computation.
@@ -103,7 +108,7 @@ class CostModel:
             Meant to be good to about 30 % once `learn` has seen computations of similar size.
         """
         work = _counted(config)
-        seconds = self._raw(config, work) * self._correction.get(_size_class(work), 1.0)
+        seconds = self._raw(config, work) * self._correction.get(_kind_of_work(config), 1.0)
         return Prediction(seconds, work.peak_bytes)
 
     def _raw(self, config: Config, work: _Work) -> float:
@@ -129,16 +134,16 @@ class CostModel:
         float
             Actual over predicted time; the correction moves by its square root.
         """
-        work = _counted(config)
         ratio = seconds / self.predict(config).seconds
-        old = self._correction.get(_size_class(work), 1.0)
-        self._correction[_size_class(work)] = old * math.sqrt(ratio)
+        kind = _kind_of_work(config)
+        self._correction[kind] = self._correction.get(kind, 1.0) * math.sqrt(ratio)
         return ratio
 
 
-def _size_class(work: _Work) -> int:
-    """Sizes within a factor of two share a correction."""
-    return round(math.log2(max(work.elements, 1.0)))
+def _kind_of_work(config: Config) -> tuple[int, bool, str]:
+    """Computations that share a correction: sizes within a factor of two, mass, first stage."""
+    elements = PATCH_AREA * config.points.density
+    return round(math.log2(elements)), config.mass > 0, config.patch_rule.kind
 
 
 def _rate_in_cache() -> float:

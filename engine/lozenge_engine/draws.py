@@ -14,16 +14,9 @@ from numpy.typing import NDArray
 
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import InputError
-from lozenge_engine.geometry import (
-    PATCH_AREA,
-    Region,
-    check_regions,
-    largest_mean_gap,
-    largest_separation,
-    mirror_images,
-    with_separation,
-)
+from lozenge_engine.geometry import PATCH_AREA, Region, check_regions, largest_separation
 from lozenge_engine.pipeline import DENSE_LIMIT
+from lozenge_engine.placement import largest_mean_gap, mirror_images, with_separation
 from lozenge_engine.samples import Draw
 
 __all__ = [

@@ -9,8 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.config import Config
-from lozenge_engine.geometry import gaps
 from lozenge_engine.kernels import cuts, gaussian, laws
+from lozenge_engine.placement import gaps
 from lozenge_engine.readout import Measured, read
 from lozenge_engine.result import Pair, RegionResult, Status, Triple, UnionResult
 
@@ -202,10 +202,12 @@ class Entropies:
         )
 
     def triples(self) -> tuple[Triple, ...]:
-        """Tripartite information of every three regions with consecutive letters."""
+        """Tripartite information of every three regions that are neighbours in x."""
+        row = sorted(range(len(self.blocks)), key=lambda k: self.config.regions[k].x0)
         found = []
-        for a in range(len(self.blocks) - 2):
-            members = (a, a + 1, a + 2)
+        for near in zip(row, row[1:], row[2:], strict=False):
+            a, b, c = sorted(near)
+            members = (a, b, c)
             values = {}
             for rule in UNION_RULES:
                 values[rule] = sum(

@@ -18,16 +18,11 @@ from lozenge_engine.config import (
     Setup,
     SweepPlan,
 )
-from lozenge_engine.geometry import (
-    MAX_REGIONS,
-    PATCH_AREA,
-    largest_half_width,
-    largest_mean_gap,
-    largest_separation,
-)
+from lozenge_engine.geometry import MAX_REGIONS, PATCH_AREA, largest_half_width, largest_separation
+from lozenge_engine.placement import largest_mean_gap
 from lozenge_engine.pointfile import PointFile
 
-__all__ = ["Limits", "Parameters"]
+__all__ = ["Limits", "Parameters", "allowed_values"]
 
 
 class Limits(NamedTuple):
@@ -277,7 +272,9 @@ class Parameters(param.Parameterized):
             for k, v in self._values().items()
             if k != "elements" and v != self.param[k].default
         }
-        return f"Bench({', '.join(f'{k}={v!r}' for k, v in sorted(changed.items()))})"
+        return (
+            f"{type(self).__name__}({', '.join(f'{k}={v!r}' for k, v in sorted(changed.items()))})"
+        )
 
     __str__ = __repr__
 
@@ -292,6 +289,33 @@ class Parameters(param.Parameterized):
         return (
             f"<table><tr><th>parameter</th><th>value</th><th>no effect now</th></tr>{rows}</table>"
         )
+
+
+def allowed_values(owner: param.Parameterized, name: str) -> str:
+    """What a parameter takes, in words, from its own declaration.
+
+    Parameters
+    ----------
+    owner : param.Parameterized
+        Who has the parameter.
+    name : str
+        Its name.
+
+    Returns
+    -------
+    str
+        The choices, the range or the kind of value.
+    """
+    declared = owner.param[name]
+    if isinstance(declared, param.Selector):
+        return ", ".join(map(str, declared.objects))
+    if isinstance(declared, param.Number):
+        kind = "a whole number" if isinstance(declared, param.Integer) else "a number"
+        low, high = declared.bounds or (None, None)
+        above = "" if low is None else f" from {low:g}"
+        return kind + above + ("" if high is None else f" to {high:g}")
+    kinds = getattr(declared, "class_", None)
+    return f"a {kinds.__name__}" if isinstance(kinds, type) else "another value"
 
 
 def _fits(count: int, half_width: float, separation: float) -> bool:

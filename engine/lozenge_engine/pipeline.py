@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from lozenge_engine import __version__
 from lozenge_engine.config import Config
-from lozenge_engine.cost import Prediction, predict
+from lozenge_engine.cost import Prediction, predict, shared_model
 from lozenge_engine.entropies import UNION_RULES, Block, Entropies, UnionRule
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import PATCH_AREA, Region
@@ -99,14 +99,26 @@ def compute(
     modes of the patch; less where a region holds n < 2 r elements.
     """
     with blas_threads(1):
-        return _Computation(config, points, stages or Stages(), report).result()
+        computation = _Computation(config, points, stages or Stages(), report)
+        result = computation.result()
+    if computation.afresh and shared_model().calibrated:
+        shared_model().learn(config, sum(result.seconds.values()))
+    return result
 
 
 def _mode_threads(elements: int) -> int:
     """Threads for the patch's modes: one keeps a page fluid, a large basis pays for all cores."""
     if elements <= THREADS_FROM:
         return 1
-    return int(os.environ.get("LOZENGE_THREADS", "0")) or os.cpu_count() or 1
+    wanted = os.environ.get("LOZENGE_THREADS", "")
+    if wanted and not (wanted.isdigit() and int(wanted)):
+        raise refuse(
+            "LOZENGE_THREADS",
+            given=wanted,
+            allowed="a whole number above 0",
+            do="change or unset this environment variable",
+        )
+    return int(wanted) if wanted else os.cpu_count() or 1
 
 
 class _Patch(NamedTuple):
@@ -129,6 +141,7 @@ class _Computation:
         self.stages = stages
         self.report = report or (lambda _stage, _fraction: None)
         self.seconds: dict[str, float] = {}
+        self.afresh = False
         source = config.points
         if source.kind == "file":
             if file is None or file.sha256 != source.sha256:
@@ -266,6 +279,7 @@ class _Computation:
             )
         key = ("modes", *self.points_key, self.config.mass)
         known = self.stages.peek(key)
+        self.afresh = known is None
         if known is not None and known[0].floor <= floor:
             return known[0], known[1]
         if floor == 0.0:

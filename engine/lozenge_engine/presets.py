@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 from lozenge_engine.agreement import Agreement, Sender, compare_numbers
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.document import parse_json, read_bytes, write_bytes
-from lozenge_engine.geometry import gaps
+from lozenge_engine.placement import gaps
 from lozenge_engine.schema import FORMAT, FORMAT_KEY, check_document, folder
 from lozenge_engine.sections import DEFAULT, at, sections_of, setup_of
 

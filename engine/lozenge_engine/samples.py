@@ -46,7 +46,7 @@ class Draw:
             sort_keys=True,
             separators=(",", ":"),
         )
-        return hashlib.sha256((self.config.canonical_json() + rest).encode()).hexdigest()
+        return hashlib.sha256((self.config.digest + rest).encode()).hexdigest()
 
 
 class Reading(NamedTuple):

@@ -9,7 +9,8 @@ from typing import Any
 
 from lozenge_engine.config import Averaging, PointSource, Rule, Setup, SweepPlan
 from lozenge_engine.errors import InputError
-from lozenge_engine.geometry import Region, gaps
+from lozenge_engine.geometry import Region
+from lozenge_engine.placement import gaps
 
 __all__ = ["DEFAULT", "at", "sections_of", "setup_of"]
 

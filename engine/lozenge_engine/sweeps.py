@@ -34,7 +34,7 @@ from lozenge_engine.draws import (
     separation_draws,
     size_draws,
 )
-from lozenge_engine.geometry import Region, gaps, with_separation
+from lozenge_engine.geometry import Region
 from lozenge_engine.kernels.laws import calabrese_cardy_slope
 from lozenge_engine.kernels.scaling import (
     Estimate,
@@ -44,6 +44,7 @@ from lozenge_engine.kernels.scaling import (
     fit_shared,
 )
 from lozenge_engine.pipeline import UNION_RULES
+from lozenge_engine.placement import gaps, with_separation
 from lozenge_engine.samples import Reading
 
 __all__ = [

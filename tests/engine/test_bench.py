@@ -16,10 +16,11 @@ import lozenge_engine
 from lozenge_engine.bench import Bench, continuum_eigenvalues
 from lozenge_engine.config import Averaging, PointSource, Rule, Setup, SweepPlan
 from lozenge_engine.errors import InputError
-from lozenge_engine.geometry import Region, gaps
+from lozenge_engine.geometry import Region
 from lozenge_engine.kernels import modes
 from lozenge_engine.kernels.laws import diamond_eigenvalues
 from lozenge_engine.kernels.points import sprinkle
+from lozenge_engine.placement import gaps
 from lozenge_engine.pointfile import PointFile, parse_points
 
 SOURCE_ROOT = Path(lozenge_engine.__file__).parents[1]
@@ -527,3 +528,22 @@ def test_importing_the_bench_loads_no_dashboard_library() -> None:
     loaded = set(done.stdout.split())
     assert "param" in loaded
     assert not loaded & {"panel", "bokeh", "holoviews", "matplotlib", "lozenge_dashboard", "numba"}
+
+
+@pytest.mark.parametrize(
+    ("name", "value", "allowed"),
+    [
+        ("order", 0.1, "a number from 0.5 to 50"),
+        ("seed", -1, "a whole number from 0 to"),
+        ("truncation_mode", "sharp", "two_stages, patch_only"),
+        ("mass", "heavy", "a number from 0"),
+        ("sweeps", 3, "a SweepPlan"),
+    ],
+)
+def test_a_value_outside_a_parameters_own_range_is_refused_in_the_same_sentence(
+    name: str, value: object, allowed: str
+) -> None:
+    bench = Bench()
+    with pytest.raises(InputError, match=f"^{name}: given .*allowed is {allowed}.*; change {name}"):
+        setattr(bench, name, value)
+    assert getattr(bench, name) == getattr(Bench(), name)

@@ -21,7 +21,8 @@ from lozenge_engine.config import (
     SweepPlan,
 )
 from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.geometry import Region, equal_row, gaps
+from lozenge_engine.geometry import Region, equal_row
+from lozenge_engine.placement import gaps
 
 PAIR = (Region(x0=-0.5, half_width=0.2), Region(x0=0.4, half_width=0.3))
 

@@ -18,14 +18,11 @@ from lozenge_engine.geometry import (
     Region,
     check_regions,
     equal_row,
-    gaps,
     largest_half_width,
-    largest_mean_gap,
     largest_separation,
-    mirror_images,
     region_letter,
-    with_separation,
 )
+from lozenge_engine.placement import gaps, largest_mean_gap, mirror_images, with_separation
 
 CORNERS = {
     "left": Region(x0=-0.7, half_width=0.3),

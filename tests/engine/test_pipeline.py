@@ -17,11 +17,12 @@ from numpy.typing import NDArray
 from lozenge_engine import entropies
 from lozenge_engine.config import MODES, Config, PointSource, Rule, Setup
 from lozenge_engine.errors import Cancelled, InputError
-from lozenge_engine.geometry import Region, equal_row, mirror_images
+from lozenge_engine.geometry import Region, equal_row
 from lozenge_engine.kernels import modes
 from lozenge_engine.kernels.order import MassiveCommutator, MasslessCommutator
 from lozenge_engine.kernels.points import sprinkle
 from lozenge_engine.pipeline import DENSE_LIMIT, compute
+from lozenge_engine.placement import mirror_images
 from lozenge_engine.pointfile import PointFile, parse_points
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
@@ -557,3 +558,10 @@ def test_a_mark_on_any_pair_makes_the_result_untrusted(monkeypatch: pytest.Monke
 
 def test_the_versions_of_a_result_name_the_libraries() -> None:
     assert {"python", "numpy", "scipy", "lozenge"} <= set(compute(setup(1).config()).versions)
+
+
+def test_triples_are_neighbours_in_space_whatever_their_letters() -> None:
+    places = (0.6, -0.6, 0.2, -0.2)
+    regions = tuple(Region(half_width=0.15, x0=x0) for x0 in places)
+    result = compute(Setup(points=POINTS, region_list=regions, separation=0.1).config())
+    assert [t.members for t in result.triples] == [(1, 2, 3), (0, 2, 3)]

@@ -9,9 +9,10 @@ import pytest
 
 from lozenge_engine.config import Config, PointSource, Rule
 from lozenge_engine.errors import Cancelled, InputError
-from lozenge_engine.geometry import Region, equal_row, mirror_images
+from lozenge_engine.geometry import Region, equal_row
 from lozenge_engine.kernels import modes
 from lozenge_engine.pipeline import compute
+from lozenge_engine.placement import mirror_images
 from lozenge_engine.samples import Draw, reading_of, take
 from lozenge_engine.stages import Stages
 

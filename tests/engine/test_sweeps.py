@@ -19,8 +19,9 @@ from lozenge_engine.draws import (
     separation_draws,
     size_draws,
 )
-from lozenge_engine.geometry import Region, check_regions, gaps, mirror_images
+from lozenge_engine.geometry import Region, check_regions
 from lozenge_engine.kernels.points import sprinkle
+from lozenge_engine.placement import gaps, mirror_images
 from lozenge_engine.samples import Reading, take
 from lozenge_engine.stages import Stages
 from lozenge_engine.sweeps import (

@@ -1,0 +1,139 @@
+"""Where a set of regions can stand: gaps, moved gaps, and equivalent mirror images."""
+
+from __future__ import annotations
+
+import itertools
+import math
+from dataclasses import replace
+
+from lozenge_engine.errors import InputError, refuse
+from lozenge_engine.geometry import SLACK, Region, check_regions
+
+__all__ = ["gaps", "largest_mean_gap", "mirror_images", "with_separation"]
+
+
+def gaps(regions: tuple[Region, ...]) -> tuple[float, ...]:
+    """Gaps in x between the neighbouring corners of regions taken from left to right.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        In any order.
+
+    Returns
+    -------
+    tuple of float
+        One fewer than regions; >= 0 up to rounding where these are spacelike.
+    """
+    row = sorted(regions, key=lambda r: r.x0)
+    return tuple((b.x0 - b.reach) - (a.x0 + a.reach) for a, b in itertools.pairwise(row))
+
+
+def with_separation(regions: tuple[Region, ...], separation: float) -> tuple[Region, ...]:
+    """Scale the gaps of a list of regions so that their mean is `separation`.
+
+    Sizes, times, boosts, the order of the list and the middle of the whole row are kept.
+    Gaps whose mean is zero all become `separation`.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        At least two regions.
+    separation : float
+        Wanted mean gap, in patch half-widths, >= 0.
+
+    Returns
+    -------
+    tuple of Region
+        The moved regions, in the order given.
+
+    Raises
+    ------
+    InputError
+        If there is only one region or the separation is negative or not finite.
+    """
+    if len(regions) < 2:
+        raise refuse(
+            "separation", given=separation, allowed="two or more regions", do="add a region"
+        )
+    if not math.isfinite(separation) or separation < 0:
+        raise refuse(
+            "separation", given=separation, allowed="a mean gap >= 0", do="raise separation"
+        )
+    order = sorted(range(len(regions)), key=lambda i: regions[i].x0)
+    row = [regions[i] for i in order]
+    old = gaps(regions)
+    mean = sum(old) / len(old)
+    new = [g * separation / mean for g in old] if mean > SLACK else [separation] * len(old)
+    middle = (row[0].x0 - row[0].reach + row[-1].x0 + row[-1].reach) / 2
+    left = middle - (sum(new) + sum(2 * r.reach for r in row)) / 2
+    moved: dict[int, Region] = {}
+    for i, region, gap in zip(order, row, [*new, 0.0], strict=True):
+        moved[i] = replace(region, x0=left + region.reach)
+        left += 2 * region.reach + gap
+    return tuple(moved[i] for i in range(len(regions)))
+
+
+def largest_mean_gap(regions: tuple[Region, ...]) -> float:
+    """Largest mean gap of a list of regions that `check_regions` takes, by bisection.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        Regions that `check_regions` takes as they are.
+
+    Returns
+    -------
+    float
+        In patch half-widths; 0 for a single region.
+    """
+    if len(regions) < 2:
+        return 0.0
+    # The present gap fits; regions at different times may need one, so 0 need not fit.
+    low, high = max(0.0, sum(gaps(regions)) / (len(regions) - 1)), 2.0
+    for _ in range(40):
+        middle = (low + high) / 2
+        try:
+            check_regions(with_separation(regions, middle))
+            low = middle
+        except InputError:
+            high = middle
+    return low * (1.0 - 1e-12)
+
+
+def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]:
+    """All distinct mirror images (x -> -x, t -> -t) of a set of regions, itself first.
+
+    A reflection keeps letters, so image i of region A is what A becomes; images whose sets of
+    diamonds coincide are left out.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout.
+
+    Returns
+    -------
+    tuple of tuple of Region
+        One to four layouts.
+    """
+    images: list[tuple[Region, ...]] = []
+    seen: set[frozenset[tuple[float, float, float, float]]] = set()
+    for sx, st in ((1, 1), (-1, 1), (1, -1), (-1, -1)):
+        image = tuple(
+            Region(
+                t0=st * r.t0 + 0.0,
+                x0=sx * r.x0 + 0.0,
+                half_width=r.half_width,
+                boost=sx * st * r.boost + 0.0,
+            )
+            for r in regions
+        )
+        key = frozenset(
+            (round(r.t0, 12), round(r.x0, 12), round(r.half_width, 12), round(r.boost, 12))
+            for r in image
+        )
+        if key not in seen:
+            seen.add(key)
+            images.append(image)
+    return tuple(images)
