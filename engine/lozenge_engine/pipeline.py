@@ -11,7 +11,7 @@ import hashlib
 import os
 import platform
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Hashable, Iterator
 from contextlib import contextmanager
 from importlib import metadata
 from typing import Any, NamedTuple
@@ -43,6 +43,7 @@ __all__ = [
     "UnionRule",
     "compute",
     "predict",
+    "prepare",
     "versions",
 ]
 
@@ -104,6 +105,38 @@ def compute(
     if computation.afresh and shared_model().calibrated:
         shared_model().learn(config, sum(result.seconds.values()))
     return result
+
+
+def prepare(
+    config: Config, *, points: PointFile | None = None, stages: Stages
+) -> tuple[Hashable, object]:
+    """Search the patch's modes and no more, so that another process can be sent them.
+
+    Parameters
+    ----------
+    config : Config
+        What will be computed.
+    points : PointFile or None
+        The imported points, when the configuration asks for them.
+    stages : Stages
+        Cache that the modes go into.
+
+    Returns
+    -------
+    key : Hashable
+        Under which a `Stages` holds the modes.
+    modes : object
+        What to put there; `compute` with the other cache then skips the search.
+
+    Raises
+    ------
+    InputError
+        As for `compute`.
+    """
+    with blas_threads(1):
+        computation = _Computation(config, points, stages, None)
+        computation.first_stage()
+    return computation.modes_key, stages.peek(computation.modes_key)
 
 
 def _mode_threads(elements: int) -> int:
@@ -175,14 +208,7 @@ class _Computation:
 
     def result(self) -> Result:
         """Run all stages."""
-        with self._timed("points"):
-            points, sha256 = self.stages.get(("points", *self.points_key), self._points)[0]
-            region_of = membership(points, self.config.regions)
-        with self._timed("order"):
-            key = ("order", *self.points_key, self.config.mass)
-            operator = self.stages.get(key, lambda: self._operator(points))[0]
-        with self._timed("modes"), blas_threads(_mode_threads(operator.size)):
-            patch = self._patch(operator)
+        points, sha256, region_of, patch = self.first_stage()
         rows = [np.nonzero(region_of == k)[0] for k in range(len(self.config.regions))]
         with self._timed("restriction"):
             spectra = [
@@ -227,6 +253,23 @@ class _Computation:
             seconds=dict(self.seconds),
             versions=versions(),
         )
+
+    def first_stage(self) -> tuple[Coordinates, str, NDArray[np.int8], _Patch]:
+        """Points and their hash, the region that holds each, and the patch's modes."""
+        with self._timed("points"):
+            points, sha256 = self.stages.get(("points", *self.points_key), self._points)[0]
+            region_of = membership(points, self.config.regions)
+        with self._timed("order"):
+            key = ("order", *self.points_key, self.config.mass)
+            operator = self.stages.get(key, lambda: self._operator(points))[0]
+        with self._timed("modes"), blas_threads(_mode_threads(operator.size)):
+            patch = self._patch(operator)
+        return points, sha256, region_of, patch
+
+    @property
+    def modes_key(self) -> tuple[Any, ...]:
+        """Key of the patch's modes in the cache."""
+        return ("modes", *self.points_key, self.config.mass)
 
     def _points(self) -> tuple[Coordinates, str]:
         """First stage of all: the elements and their hash."""
@@ -277,7 +320,7 @@ class _Computation:
                 allowed=f"at most {DENSE_LIMIT} elements without a cut in the first stage",
                 do="lower the density or cut in the first stage",
             )
-        key = ("modes", *self.points_key, self.config.mass)
+        key = self.modes_key
         known = self.stages.peek(key)
         self.afresh = known is None
         if known is not None and known[0].floor <= floor:

@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from lozenge_engine import entropies
+from lozenge_engine import entropies, pipeline
 from lozenge_engine.config import MODES, Config, PointSource, Rule, Setup
 from lozenge_engine.errors import Cancelled, InputError
 from lozenge_engine.geometry import Region, equal_row
@@ -565,3 +565,13 @@ def test_triples_are_neighbours_in_space_whatever_their_letters() -> None:
     regions = tuple(Region(half_width=0.15, x0=x0) for x0 in places)
     result = compute(Setup(points=POINTS, region_list=regions, separation=0.1).config())
     assert [t.members for t in result.triples] == [(1, 2, 3), (0, 2, 3)]
+
+
+def test_modes_prepared_elsewhere_are_not_searched_again(monkeypatch: pytest.MonkeyPatch) -> None:
+    config = setup(2, truncation_mode="regions_only").config()
+    key, found = pipeline.prepare(config, stages=Stages())
+    here = Stages()
+    here.put(key, found)
+    expected = compute(config).regions[0].entropy
+    monkeypatch.setattr(modes, "all_modes", None)
+    assert compute(config, stages=here).regions[0].entropy == expected
