@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import pytest
+
 from lozenge_dashboard.column import Behind, Heading, Job, column_state
 from lozenge_engine.bench import Bench
 from lozenge_engine.config import Setup

@@ -5,13 +5,13 @@ from __future__ import annotations
 import base64
 
 import pytest
+from tests.dashboard.scenes import SMALL, bare
+
 from lozenge_dashboard.controls import PRESET_LIMIT
 from lozenge_dashboard.exchange import Uploads, as_preset, check_size, file_name
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.errors import InputError
 from lozenge_engine.presets import FIRST, ViewState, compare, dumps, parse, shipped
-
-from tests.dashboard.scenes import SMALL, bare
 
 
 def part(data: bytes, *, first: bool, last: bool, purpose: str = "preset") -> dict[str, object]:

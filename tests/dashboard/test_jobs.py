@@ -8,6 +8,7 @@ import time
 from collections.abc import Callable, Iterator
 
 import pytest
+
 from lozenge_dashboard.jobs import PATIENCE, Flight, Workshop
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.samples import take

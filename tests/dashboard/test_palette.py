@@ -6,6 +6,7 @@ import itertools
 
 import numpy as np
 import pytest
+
 from lozenge_dashboard.palette import LOOKS, MARKERS, Look
 
 # Linear RGB -> long, medium and short cones, and the OKLab axes (published constants).

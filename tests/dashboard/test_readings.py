@@ -6,10 +6,10 @@ import math
 from dataclasses import replace
 
 import pytest
+from tests.dashboard.scenes import SMALL, bare, full
+
 from lozenge_dashboard.readings import COLUMNS, readings_html, table_rows, values
 from lozenge_engine.config import Setup
-
-from tests.dashboard.scenes import SMALL, bare, full
 
 
 def test_one_sprinkling_gives_its_own_value_and_no_error() -> None:

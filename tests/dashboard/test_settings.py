@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import pytest
+
 from lozenge_dashboard.controls import GROUPS
 from lozenge_dashboard.settings import SETTINGS
 from lozenge_engine.config import Setup
@@ -38,7 +39,10 @@ OTHER = {
     "smallest_region": 50,
 }
 # A rule forgets what its kind does not use.
-NEEDS = {"patch_number": ("patch_kind", "fixed_number"), "region_number": ("region_kind", "fixed_number")}
+NEEDS = {
+    "patch_number": ("patch_kind", "fixed_number"),
+    "region_number": ("region_kind", "fixed_number"),
+}
 
 
 def test_page_offers_every_setting_and_no_other() -> None:
@@ -58,7 +62,9 @@ def test_value_that_is_put_is_read_back(name: str) -> None:
     assert SETTINGS[name].get(changed) == OTHER[name]
 
 
-@pytest.mark.parametrize("name", sorted(set(OTHER) - {"kind", "truncation_mode", "patch_kind", "region_kind"}))
+@pytest.mark.parametrize(
+    "name", sorted(set(OTHER) - {"kind", "truncation_mode", "patch_kind", "region_kind"})
+)
 @pytest.mark.parametrize("value", ["wide", "", None, True, [1]])
 def test_what_is_no_number_is_refused_in_words(name: str, value: object) -> None:
     with pytest.raises(InputError, match="given"):

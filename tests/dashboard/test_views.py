@@ -8,13 +8,14 @@ from dataclasses import replace
 import holoviews as hv
 import numpy as np
 import pytest
+from tests.dashboard.scenes import SMALL, bare, full
+
 from lozenge_dashboard.palette import DARK, LIGHT, MARKERS
 from lozenge_dashboard.records import Choices
 from lozenge_dashboard.views import counts, entropies, scaling, separation, spectrum, sprinkling
 from lozenge_dashboard.views.catalogue import VIEWS, Figure, register_all
 from lozenge_dashboard.views.marks import Dust, Layer, Marks
 from lozenge_engine.config import Setup
-from tests.dashboard.scenes import SMALL, bare, full
 
 CHOICES = Choices()
 FIGURES = [figure for view in VIEWS for figure in view.figures.values()]

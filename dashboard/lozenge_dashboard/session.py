@@ -1,0 +1,421 @@
+"""One page: from what the user does to what the views show."""
+
+from __future__ import annotations
+
+from typing import Any, NamedTuple
+
+import panel as pn
+
+from lozenge_dashboard.behind import Backdrop
+from lozenge_dashboard.board import Board
+from lozenge_dashboard.column import Heading, Job, column_state
+from lozenge_dashboard.controls import LIVE_HIGH
+from lozenge_dashboard.exchange import (
+    PAGE_HIGH,
+    Uploads,
+    as_preset,
+    check_size,
+    file_name,
+    too_many,
+)
+from lozenge_dashboard.jobs import Flight, Progress, Workshop
+from lozenge_dashboard.palette import LOOKS
+from lozenge_dashboard.picture import Picture, modes_key, picture_of
+from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.settings import SETTINGS
+from lozenge_dashboard.turn import Turn
+from lozenge_engine.bench import Bench
+from lozenge_engine.config import Config, Setup
+from lozenge_engine.errors import InputError
+from lozenge_engine.notation import duration, thousands
+from lozenge_engine.pipeline import predict
+from lozenge_engine.pointfile import PointFile, parse_points
+from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps, parse
+from lozenge_engine.result import Result
+from lozenge_engine.stages import Stages
+
+__all__ = ["Server", "Session"]
+
+LIVE_SECONDS = 10.0
+"""A computation predicted to take longer waits for its button, however few the elements."""
+FRONT = ("sprinkling", "spectrum", "counts", "entropies")
+SWEEPS = ("scaling", "separation")
+
+
+class Server(NamedTuple):
+    """What all pages share."""
+
+    stages: Stages
+    workshop: Workshop
+    shipped: dict[str, Preset]
+
+
+class Session:
+    """State of one page.
+
+    Parameters
+    ----------
+    server : Server
+        What all pages share.
+    preset : Preset
+        The screen to open with.
+    points : PointFile or None
+        Imported points that the preset asks for.
+    """
+
+    def __init__(self, server: Server, preset: Preset, *, points: PointFile | None = None) -> None:
+        self.server = server
+        self.bench = Bench()
+        self.errors: dict[str, str] = {}
+        self._wanted: Preset | None = None
+        try:
+            check_size(preset.setup)
+            self.bench.load(preset.setup, points=points)
+        except InputError as error:
+            self.errors["preset"] = str(error)
+            self._wanted, preset = preset, server.shipped[FIRST]
+            self.bench.load(preset.setup)
+        self.preset = preset
+        self.theme = preset.view.theme
+        self.focus = preset.view.focus
+        self.choices = _choices(preset.view)
+        self.scene: Scene | None = None
+        self.kept: Scene | None = None
+        self.failure = ""
+        self.agreement, self.differs = "", False
+        self.job = Job()
+        self.seconds: dict[str, float] = {}
+        self.settled = True
+        self._pressed: Config | None = None
+        self._modes_of: object = None
+        self._uploads = Uploads()
+        self._answered = 0
+        self._computing = False
+        self.turn = Turn(pn.state.curdoc)
+        self.picture = Flight(self.turn.later(self._pictured), self.turn.later(self._progressed))
+        self.backdrop = Backdrop(server.workshop, later=self.turn.later, show=self._gathered)
+        self.board = Board(
+            self.receive,
+            self.receive_view,
+            shipped=[(name, p.title) for name, p in server.shipped.items()],
+            state=self._state(),
+        )
+        self.board.arrange(self.choices, self.focus, self.turn.document)
+
+    # ------------------------------------------------------------ beginning and end
+
+    def open(self) -> None:
+        """Compute the first picture, once the browser has the page."""
+        self.board.restyle(LOOKS[self.theme], self.turn.document)
+        self._request()
+
+    def close(self) -> None:
+        """Forget the page."""
+        self.picture.close()
+        self.backdrop.close()
+
+    # ------------------------------------------------------------ what the user does
+
+    def receive(self, message: dict[str, Any]) -> None:
+        """Take a message of the controls."""
+        kind = message.get("kind")
+        self._answered = message.get("id", self._answered)
+        with self.turn.together():
+            if kind == "set":
+                self._set(message["name"], message["value"], settled=bool(message["settled"]))
+            elif kind == "act":
+                self._act(message["name"], message.get("value"))
+            elif kind == "file":
+                self._take_part(message)
+            self._push()
+
+    def receive_view(self, name: str, message: dict[str, Any]) -> None:
+        """Take a message of a view's head."""
+        with self.turn.together():
+            if message.get("kind") == "focus":
+                self.focus = None if self.focus == name else name  # type: ignore[assignment]
+            elif message.get("kind") == "choose":
+                self.choices = self.choices._replace(**{name: message["value"]})
+            self.board.arrange(self.choices, self.focus, self.turn.document)
+            self._paint()
+            self._push()
+
+    def _set(self, name: str, value: Any, *, settled: bool) -> None:
+        """Change one control, or say at it why not."""
+        self.settled = settled
+        if name == "union_rule":
+            self.choices = self.choices._replace(union_rule=value)
+            self._paint()
+            return
+        before = self.bench.setup()
+        try:
+            setup = SETTINGS[name].put(before, value)
+            check_size(setup)
+            self.bench.load(setup)
+        except InputError as error:
+            self.errors[name] = str(error)
+            return
+        self.errors.clear()
+        if setup != before:
+            self.agreement = ""
+            self._request()
+        elif settled:
+            self._settle()
+
+    def _act(self, name: str, value: Any) -> None:
+        """Do what a button says."""
+        if name == "shipped" and value in self.server.shipped:
+            self._open_preset(self.server.shipped[value])
+        elif name == "theme":
+            self.theme = "light" if self.theme == "dark" else "dark"
+            self.board.restyle(LOOKS[self.theme], self.turn.document)
+            self._paint()
+        elif name == "keep":
+            self.kept = None if self.kept else self.scene and self.scene._replace(reference=None)
+            self._paint()
+        elif name == "back":
+            self._open_preset(self.preset, arrange=False)
+        elif name == "save":
+            self._save()
+        elif name == "compute":
+            self._pressed = self.bench.config()
+            self._request()
+        elif name == "cancel":
+            self._pressed = None
+            self.picture.cancel()
+            self._offer(self.bench.setup())
+        elif name in ("halt", "resume"):
+            self.backdrop.halt() if name == "halt" else self.backdrop.resume()
+            self._settle()
+
+    # ------------------------------------------------------------ presets and files
+
+    def _open_preset(self, preset: Preset, *, arrange: bool = True) -> None:
+        """Show a preset; if it is refused the page keeps its state."""
+        try:
+            check_size(preset.setup)
+            self.bench.load(preset.setup)
+        except InputError as error:
+            self.errors["preset"] = str(error)
+            self._wanted = preset
+            return
+        self.preset, self._wanted = preset, None
+        self.errors.clear()
+        self.agreement, self.settled = "", True
+        self.choices = _choices(preset.view, self.choices)
+        if arrange:
+            self.focus = preset.view.focus
+            if self.theme != preset.view.theme:
+                self._act("theme", None)
+        self.board.arrange(self.choices, self.focus, self.turn.document)
+        self._request()
+
+    def _take_part(self, message: dict[str, Any]) -> None:
+        """Take a part of a file; the last one opens it."""
+        self.errors.pop("preset", None)
+        try:
+            upload = self._uploads.take(message)
+            if upload is None:
+                return
+            if upload.purpose == "points":
+                self._open_points(upload.data, upload.name)
+            else:
+                self._open_preset(parse(upload.data))
+        except InputError as error:
+            self.errors["preset"] = f"{str(message['name'])[:200]}: {error}"
+
+    def _open_points(self, data: bytes, name: str) -> None:
+        """Use imported points, for the preset that waits for them or for the present setup."""
+        file = parse_points(data, name=name)
+        count = file.points.u.size
+        if count > PAGE_HIGH:
+            raise too_many(count)
+        waiting = self._wanted
+        if waiting is not None and waiting.setup.points.sha256 == file.sha256:
+            self.bench.load(waiting.setup, points=file)
+            self._open_preset(waiting)
+            return
+        self.bench.import_points(file)
+        self.errors.clear()
+        self.agreement, self.settled = "", True
+        self._request()
+
+    def _save(self) -> None:
+        """Let the browser download the screen as a preset, with the numbers shown."""
+        setup = self.bench.setup()
+        shown = self.scene is not None and self.scene.setup == setup
+        view = ViewState(
+            theme=self.theme,
+            focus=self.focus,
+            union_rule=self.choices.union_rule,
+            scaling_axis=self.choices.scaling,
+        )
+        preset = as_preset(
+            self.preset, setup, view, self.scene.result if shown and self.scene else None
+        )
+        try:
+            self.board.controls.download(file_name(preset), dumps(preset))
+        except InputError as error:
+            self.errors["preset"] = str(error)
+
+    # ------------------------------------------------------------ the picture in front
+
+    def _request(self) -> None:
+        """Compute the present setup, or offer to."""
+        setup = self.bench.setup()
+        self.failure = ""
+        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "computing …"))
+        if not self._live(setup):
+            self._offer(setup)
+            return
+        self.job = Job()
+        work = picture_of(setup, points=self.bench.file, stages=self.server.stages)
+        self.server.workshop.wait()
+        self._computing = True
+        self.picture.request(work)
+
+    def _live(self, setup: Setup) -> bool:
+        """Whether a setup is computed at once: small, asked for, or its modes are known."""
+        config = setup.config()
+        if self._pressed == config or self._modes_of == modes_key(setup):
+            return True
+        if 2 * setup.points.density > LIVE_HIGH:
+            return False
+        return setup.rules()[0].kind != "none" or predict(config).seconds < LIVE_SECONDS
+
+    def _offer(self, setup: Setup) -> None:
+        """Ask before a long computation, with its predicted time."""
+        self.picture.cancel()
+        self._computing = False
+        elements = thousands(round(2 * setup.points.density))
+        seconds = duration(predict(setup.config()).seconds)
+        self.job = Job(f"{elements} elements: about {seconds}", None, can_compute=True)
+        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "earlier"))
+        self.board.status("")
+
+    def _progressed(self, progress: Progress) -> None:
+        """Say what is computed and for how long, unless it was stopped since."""
+        if not self._computing:
+            return
+        text = f"{progress.stage}, {duration(progress.seconds)}"
+        self.board.status(text, busy=True)
+        if progress.seconds > 1.0:
+            whole = predict(self.bench.config()).seconds
+            self.job = Job(
+                f"{text} of about {duration(whole)}",
+                min(progress.seconds / whole, 0.98),
+                can_cancel=True,
+            )
+            self._push()
+
+    def _pictured(self, outcome: Picture | Exception) -> None:
+        """Show a finished picture, or the error where the last good one stays."""
+        newer = isinstance(outcome, Picture) and outcome.setup != self.bench.setup()
+        self.job, self._computing = Job(), newer and self._computing
+        self.board.status("")
+        if isinstance(outcome, Exception):
+            self._failed(outcome)
+        else:
+            self.seconds |= outcome.seconds
+            self._modes_of = modes_key(outcome.setup)
+            self.scene = Scene(
+                setup=outcome.setup,
+                result=outcome.result,
+                continuum=outcome.continuum,
+                **self.backdrop.parts(outcome.setup),
+            )
+            self._compare(outcome.result)
+            self._mark_stale()
+            self._paint()
+            if self.settled:
+                self._settle()
+        self._push()
+
+    def _failed(self, error: Exception) -> None:
+        """Keep the last good picture and say below the views why there is no newer one."""
+        known = isinstance(error, InputError)
+        self.failure = str(error) if known else f"{type(error).__name__}: {error}"
+        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "earlier"))
+        place = "spectrum" if "patch rule" in self.failure else "sprinkling"
+        self.board.frames[place].say(self.failure, error=True)
+        self.board.status("not computed")
+
+    def _compare(self, result: Result) -> None:
+        """Say whether the sender's numbers agree, while the setup is the sender's."""
+        if self.preset.sender is not None and self.bench.setup() == self.preset.setup:
+            agreement = compare(self.preset, result)
+            self.agreement, self.differs = (
+                f"Sender's numbers: {agreement.text}.",
+                not agreement.agrees,
+            )
+
+    # ------------------------------------------------------------ what comes from behind
+
+    def _settle(self) -> None:
+        """Queue the sprinklings behind the picture, once the controls rest."""
+        setup = self.bench.setup()
+        if self.scene is not None and self.scene.setup == setup:
+            self._paint()
+            self.backdrop.settle(setup, self.bench.file, first=self.choices.scaling)
+
+    def _gathered(self) -> None:
+        """Show what came from behind."""
+        if self.scene is not None:
+            self.scene = self.scene._replace(**self.backdrop.parts(self.scene.setup))
+            self._mark_stale()
+            self._paint()
+        self._push()
+
+    def _mark_stale(self) -> None:
+        """Say which sweeps still show an earlier state; the views in front are up to date."""
+        if self.scene is not None and self.scene.setup == self.bench.setup():
+            self.board.stale(self.backdrop.stale(self.scene.setup, self.choices))
+
+    # ------------------------------------------------------------ to the browser
+
+    def _paint(self) -> None:
+        """Draw the present scene in all views."""
+        if self.scene is None:
+            return
+        scene = self.scene._replace(reference=self.kept)
+        self.board.show(
+            scene,
+            self.choices,
+            LOOKS[self.theme],
+            self.turn.document,
+            names=(*FRONT, *SWEEPS),
+            settled=self.settled,
+        )
+
+    def _push(self) -> None:
+        """Send the state of the controls."""
+        self.board.controls.state = self._state()
+
+    def _state(self) -> dict[str, Any]:
+        heading = Heading(
+            title=self.preset.title,
+            sentence=self.preset.sentence,
+            agreement=self.agreement,
+            differs=self.differs,
+            error=self.errors.get("preset", "") or self.failure,
+            keeping=self.kept is not None,
+            theme=self.theme,
+            focus=self.focus,
+        )
+        state = column_state(
+            self.bench,
+            self.preset.setup,
+            union_rule=self.choices.union_rule,
+            loaded_union_rule=self.preset.view.union_rule,
+            errors=self.errors,
+            seconds=self.seconds,
+            heading=heading,
+            job=self.job,
+            behind=self.backdrop.progress,
+        )
+        return {**state, "answered": self._answered}
+
+
+def _choices(view: ViewState, before: Choices | None = None) -> Choices:
+    """The switches that a preset holds; the others stay."""
+    return (before or Choices())._replace(union_rule=view.union_rule, scaling=view.scaling_axis)

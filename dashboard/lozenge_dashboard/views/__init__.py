@@ -1,0 +1,1 @@
+"""The views of the page, one per file: records in, a named tuple, a figure."""

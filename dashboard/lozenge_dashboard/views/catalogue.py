@@ -1,0 +1,215 @@
+"""The six views in the order of the computation: what each asks, and how it is drawn."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, NamedTuple
+
+import holoviews as hv
+
+from lozenge_dashboard.palette import Look
+from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.views import counts, entropies, scaling, separation, spectrum, sprinkling
+from lozenge_dashboard.views.marks import register
+
+__all__ = ["VIEWS", "Figure", "View", "register_all"]
+
+
+class Figure(NamedTuple):
+    """One figure of a view.
+
+    Attributes
+    ----------
+    group : str
+        Its name, unique on the page.
+    read : callable
+        (scene, choices, look) -> a NamedTuple of the figure's layers from the bottom up, then
+        its `limits` and, where they are words, its `ticks` on the y axis.
+    draw : callable
+        Columns -> HoloViews overlay.
+    blank : NamedTuple
+        Columns before the first record.
+    axes : dict
+        What `lozenge_dashboard.views.marks.register` takes.
+    """
+
+    group: str
+    read: Callable[[Scene, Choices, Look], Any]
+    draw: Callable[[Any], hv.Overlay]
+    blank: Any
+    axes: dict[str, Any]
+
+
+class View(NamedTuple):
+    """One view of the page.
+
+    Attributes
+    ----------
+    name, question : str
+        Its name and what it asks.
+    figures : dict of str to Figure
+        By the value of the view's switch at which each is shown; key "" for every value.
+    caution : callable
+        (scene, choices) -> the one line below.
+    parts : callable
+        scene -> what it depends on; the view is drawn anew when one of these is another object.
+    options : tuple of (value, label)
+        The view's switch, if it has one.
+    """
+
+    name: str
+    question: str
+    figures: dict[str, Figure]
+    caution: Callable[[Scene, Choices], str]
+    parts: Callable[[Scene], tuple[Any, ...]]
+    options: tuple[tuple[str, str], ...] = ()
+
+
+def _front(scene: Scene) -> tuple[Any, ...]:
+    """The sprinkling in front and the scene kept for comparison."""
+    return scene.result, scene.reference
+
+
+VIEWS = (
+    View(
+        "sprinkling",
+        "Where are the elements?",
+        {
+            "": Figure(
+                sprinkling.GROUP,
+                sprinkling.read,
+                sprinkling.draw,
+                sprinkling.BLANK,
+                {
+                    "x": "position x (patch half-widths)",
+                    "y": "time t (patch half-widths)",
+                    "align": "center",
+                },
+            )
+        },
+        sprinkling.caution,
+        _front,
+    ),
+    View(
+        "spectrum",
+        "Which modes pass the cuts?",
+        {
+            "": Figure(
+                spectrum.GROUP,
+                spectrum.read,
+                spectrum.draw,
+                spectrum.BLANK,
+                {
+                    "x": "rank of the mode k",
+                    "y": "eigenvalue λ (causal-set units)",
+                    "log": True,
+                    "offset": (0.0, 9.0),
+                },
+            )
+        },
+        spectrum.caution,
+        _front,
+    ),
+    View(
+        "counts",
+        "How many modes are kept?",
+        {
+            "": Figure(
+                counts.GROUP,
+                counts.read,
+                counts.draw,
+                counts.BLANK,
+                {"x": "kept positive modes", "y": "", "offset": (10.0, 0.0)},
+            )
+        },
+        counts.caution,
+        _front,
+    ),
+    View(
+        "entropies",
+        "How much entanglement?",
+        {
+            "values": Figure(
+                entropies.GROUP,
+                entropies.read,
+                entropies.draw,
+                entropies.BLANK,
+                {"x": "entropy S, information I (nats)", "y": "", "offset": (10.0, 0.0)},
+            ),
+            "modes": Figure(
+                entropies.MODES_GROUP,
+                entropies.read_contributions,
+                entropies.draw_contributions,
+                entropies.BLANK_MODES,
+                {
+                    "x": "rank of the symplectic value",
+                    "y": "contribution to S (nats)",
+                    "log": True,
+                },
+            ),
+        },
+        entropies.caution,
+        lambda scene: (*_front(scene), scene.average),
+        (("values", "values"), ("modes", "per mode")),
+    ),
+    View(
+        "scaling",
+        "How does S grow?",
+        {
+            "": Figure(
+                scaling.GROUP,
+                scaling.read,
+                scaling.draw,
+                scaling.BLANK,
+                {
+                    "x": "scale ln(ℓ/a)",
+                    "y": "entropy S, all regions (nats)",
+                    "offset": (8.0, 0.0),
+                },
+            )
+        },
+        scaling.caution,
+        lambda scene: (scene.density, scene.size, scene.reference),
+        (("density", "density"), ("size", "size")),
+    ),
+    View(
+        "separation",
+        "How does it fall off?",
+        {
+            "mutual": Figure(
+                separation.GROUP,
+                separation.read,
+                separation.draw,
+                separation.BLANK,
+                {
+                    "x": "separation d (patch half-widths)",
+                    "y": "mutual information I (nats)",
+                    "align": "right",
+                    "offset": (-8.0, 0.0),
+                },
+            ),
+            "union": Figure(
+                separation.UNION_GROUP,
+                separation.read,
+                separation.draw_union,
+                separation.BLANK,
+                {
+                    "x": "separation d (patch half-widths)",
+                    "y": "entropy S of the union (nats)",
+                    "align": "right",
+                    "offset": (-8.0, 0.0),
+                },
+            ),
+        },
+        separation.caution,
+        lambda scene: (scene.separation, scene.setup.separation, *_front(scene)[1:]),
+        (("mutual", "I"), ("union", "S")),
+    ),
+)
+
+
+def register_all() -> None:
+    """Register the fixed options of all figures with HoloViews; once per process."""
+    for view in VIEWS:
+        for figure in view.figures.values():
+            register(figure.group, **figure.axes)
