@@ -7,6 +7,7 @@ import socket
 import sys
 import threading
 import webbrowser
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +22,10 @@ __all__ = ["ADDRESS", "FIRST_PORT", "free_port", "serve"]
 ADDRESS = "127.0.0.1"
 FIRST_PORT = 5480
 PORTS_TRIED = 50
+FIRST_LIMIT = 5000
+"""Elements up to which the first picture is computed before a page asks for it."""
+WARM_AFTER = 3.0
+"""Seconds after the first page was loaded."""
 
 
 def free_port(wanted: int) -> int:
@@ -59,16 +64,37 @@ def free_port(wanted: int) -> int:
     )
 
 
-def _first_picture(setup: Setup, stages: Stages) -> None:
-    """Compute what the first page will ask for, and warm the compiled loops after it."""
-    from lozenge_engine.kernels.order import warm
-    from lozenge_engine.pipeline import compute, predict
+def _first_picture(setup: Setup, stages: Stages, done: threading.Event) -> None:
+    """Compute what the first page will ask for, while the page's libraries are imported."""
+    try:
+        from lozenge_engine.pipeline import compute
 
-    if setup.points.kind != "file" and 2 * setup.points.density <= 5000:
-        compute(setup.config(), stages=stages)
-    predict(setup.config())
+        patch_rule, _ = setup.rules()
+        small = 2 * setup.points.density <= FIRST_LIMIT and patch_rule.kind != "none"
+        if setup.points.kind != "file" and small:
+            compute(setup.config(), stages=stages)
+    finally:
+        done.set()
+
+
+def _warm(stages: Stages) -> None:
+    """Compile the loops and measure the machine, once the first picture is on the screen."""
+    from lozenge_engine.kernels.order import warm
+    from lozenge_engine.pipeline import predict
+
+    predict(Setup().config())
     warm()
     stages.compiled = True
+
+
+def _once(timer: threading.Timer) -> Callable[[], None]:
+    """Start a timer at the first call."""
+
+    def start() -> None:
+        if not (timer.is_alive() or timer.finished.is_set()):
+            timer.start()
+
+    return start
 
 
 def _say(line: str) -> None:
@@ -103,9 +129,9 @@ def serve(
     """
     known = shipped()
     first = preset or known[FIRST]
-    stages = Stages()
+    stages, ready = Stages(), threading.Event()
     threading.Thread(
-        target=_first_picture, args=(first.setup, stages), name="first", daemon=True
+        target=_first_picture, args=(first.setup, stages, ready), name="first", daemon=True
     ).start()
     wanted = FIRST_PORT if port is None else port
     chosen = free_port(wanted)
@@ -115,13 +141,11 @@ def serve(
     # Panel and HoloViews take a second to import; the first picture is computed meanwhile.
     from lozenge_dashboard.page import pages
 
-    factory, close = pages(first, known, stages, path=path)
+    warming = threading.Timer(WARM_AFTER, _warm, args=(stages,))
+    warming.daemon = True
+    factory, close = pages(first, known, stages, path=path, ready=ready, loaded=_once(warming))
     import panel as pn
 
-    address = f"http://{ADDRESS}:{chosen}/"
-    _say(f"Lozenge is at {address} (Ctrl-C ends it).")
-    if browser:
-        threading.Timer(0.2, webbrowser.open, args=(address,)).start()
     options: dict[str, Any] = {
         "port": chosen,
         "address": ADDRESS,
@@ -129,11 +153,18 @@ def serve(
         "show": False,
         "title": "Lozenge",
         "verbose": False,
+        "start": False,
     }
+    address = f"http://{ADDRESS}:{chosen}/"
     try:
         # Idle threads of a larger pool spin and slow the page's small matrices tenfold; the engine
         # asks for more threads where they pay.
         with blas_threads(1):
-            pn.serve({"/": factory}, **options)
+            server = pn.serve({"/": factory}, **options)
+            server.start()
+            _say(f"Lozenge is at {address} (Ctrl-C ends it).")
+            if browser:
+                threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()
+            server.run_until_shutdown()
     finally:
         close()

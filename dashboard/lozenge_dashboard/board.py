@@ -44,6 +44,10 @@ class Page(pn.Template):
     every root: together a second of the 2.5 s that a first page otherwise takes (measured).
     """
 
+    def __init__(self, then: Callable[[], None], template: str) -> None:
+        self._then = then
+        super().__init__(template)
+
     def __repr__(self, *_: object) -> str:
         """A short name."""
         return type(self).__name__
@@ -55,7 +59,9 @@ class Page(pn.Template):
         del location
         document: Document = doc or pn.state.curdoc
         with document.models.freeze():
-            return super().server_doc(document, title or "Lozenge", location=False)
+            super().server_doc(document, title or "Lozenge", location=False)
+            self._then()
+        return document
 
 
 class Board:
@@ -101,9 +107,9 @@ class Board:
         self._status = ""
         self._line = ""
 
-    def template(self) -> Page:
-        """Everything laid out as one page."""
-        page = Page((ASSETS / "page.html").read_text(encoding="utf-8"))
+    def template(self, *, then: Callable[[], None]) -> Page:
+        """Everything laid out as one page; `then` runs when the figures are in its document."""
+        page = Page(then, (ASSETS / "page.html").read_text(encoding="utf-8"))
         page.add_variable("page_css", page_css())
         page.add_variable(
             "views",

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable
 from pathlib import Path
 
@@ -17,9 +18,18 @@ from lozenge_engine.stages import Stages
 
 __all__ = ["pages"]
 
+FIRST_PATIENCE = 2.0
+"""Longest time (s) that a page waits for the picture it opens with; later it comes by itself."""
+
 
 def pages(
-    preset: Preset, shipped: dict[str, Preset], stages: Stages, *, path: Path | None
+    preset: Preset,
+    shipped: dict[str, Preset],
+    stages: Stages,
+    *,
+    path: Path | None,
+    ready: threading.Event,
+    loaded: Callable[[], None],
 ) -> tuple[Callable[[], pn.Template], Callable[[], None]]:
     """Make the factory of pages and the function that ends what they share.
 
@@ -33,6 +43,10 @@ def pages(
         Cache of stage outputs.
     path : Path or None
         File of the preset.
+    ready : Event
+        Set when the modes of the first picture are in the cache, if they are computed ahead.
+    loaded : callable
+        Called whenever a browser has loaded a page.
 
     Returns
     -------
@@ -49,8 +63,14 @@ def pages(
 
     def page() -> pn.Template:
         session = Session(server, preset, points=points)
-        pn.state.onload(session.open)
+
+        def opened() -> None:
+            session.open()
+            loaded()
+
+        pn.state.onload(opened)
         pn.state.on_session_destroyed(lambda _context: session.close())
-        return session.board.template()
+        ready.wait(FIRST_PATIENCE)
+        return session.board.template(then=session.draw_ahead)
 
     return page, server.workshop.close

@@ -104,10 +104,25 @@ class Session:
 
     # ------------------------------------------------------------ beginning and end
 
-    def open(self) -> None:
-        """Compute the first picture, once the browser has the page."""
+    def draw_ahead(self) -> None:
+        """Put the first picture into the page before it is sent, if it is there at once."""
         self.board.restyle(LOOKS[self.theme], self.turn.document)
-        self._request()
+        setup = self.bench.setup()
+        if setup.rules()[0].kind == "none" or not self._live(setup):
+            return
+        work = picture_of(setup, points=self.bench.file, stages=self.server.stages)
+        try:
+            self._take(work(lambda _stage, _fraction: None))
+        except InputError as error:
+            self._failed(error)
+        self._push()
+
+    def open(self) -> None:
+        """Go on from the first picture, or compute it, once the browser has the page."""
+        if self.scene is None:
+            self._request()
+        else:
+            self._settle()
 
     def close(self) -> None:
         """Forget the page."""
@@ -316,20 +331,24 @@ class Session:
         if isinstance(outcome, Exception):
             self._failed(outcome)
         else:
-            self.seconds |= outcome.seconds
-            self._modes_of = modes_key(outcome.setup)
-            self.scene = Scene(
-                setup=outcome.setup,
-                result=outcome.result,
-                continuum=outcome.continuum,
-                **self.backdrop.parts(outcome.setup),
-            )
-            self._compare(outcome.result)
-            self._mark_stale()
-            self._paint()
+            self._take(outcome)
             if self.settled:
                 self._settle()
         self._push()
+
+    def _take(self, picture: Picture) -> None:
+        """Show a picture in all views."""
+        self.seconds |= picture.seconds
+        self._modes_of = modes_key(picture.setup)
+        self.scene = Scene(
+            setup=picture.setup,
+            result=picture.result,
+            continuum=picture.continuum,
+            **self.backdrop.parts(picture.setup),
+        )
+        self._compare(picture.result)
+        self._mark_stale()
+        self._paint()
 
     def _failed(self, error: Exception) -> None:
         """Keep the last good picture and say below the views why there is no newer one."""
