@@ -60,6 +60,8 @@ class Page(pn.Template):
         document: Document = doc or pn.state.curdoc
         with document.models.freeze():
             super().server_doc(document, title or "Lozenge", location=False)
+        # The figures are found only once the first freeze has ended.
+        with document.models.freeze():
             self._then()
         return document
 

@@ -59,8 +59,9 @@ class _Live:
     def __init__(self, figure: Figure, *, square: bool) -> None:
         self.figure = figure
         self.square = square
+        self.look: Look | None = None
         self.pane = pn.pane.HoloViews(
-            figure.draw(figure.blank),
+            None,
             sizing_mode="stretch_both",
             min_height=120,
             margin=0,
@@ -68,6 +69,13 @@ class _Live:
         self.limits: Limits | None = None
         self._bokeh: BokehPlot | None = None
         self._set: dict[str, _Range] = {}
+
+    def build(self, document: Document) -> None:
+        """Build the figure, the first time that it is shown."""
+        if self.pane.object is None:
+            self.pane.object = self.figure.draw(self.figure.blank)
+            if self.look is not None:
+                self.restyle(self.look, document)
 
     def bokeh(self, document: Document) -> BokehPlot | None:
         """The figure in a document, found once."""
@@ -150,6 +158,7 @@ class _Live:
 
     def restyle(self, look: Look, document: Document) -> None:
         """Give axes, grid and ground the colours of a theme."""
+        self.look = look
         plot = self.bokeh(document)
         if plot is None:
             return
@@ -239,6 +248,8 @@ class Frame:
     def arrange(self, choices: Choices, focus: str | None) -> None:
         """Show the figure that the switch names, and whether this view has the room."""
         shown = self._shown(choices)
+        if all(live.pane.object is None for live in self._all()):
+            shown.pane.object = shown.figure.draw(shown.figure.blank)
         for live in self._all():
             live.pane.visible = live is shown
         self.head.param.update(
@@ -250,6 +261,7 @@ class Frame:
     ) -> None:
         """Draw a scene, unless what it would show is shown already."""
         live = self._shown(choices)
+        live.build(document)
         drawn = (*self.view.parts(scene), choices, look, settled)
         if len(drawn) == len(self._drawn) and all(
             a is b or (isinstance(a, float | bool) and a == b)

@@ -401,7 +401,7 @@ export function render({ model, el }) {
     updateBackground(behind, model.state.behind);
   };
   model.on("state", update);
-  model.on("msg:custom", (event) => { if (event.data.kind === "download") save(event.data.name, event.data.text); });
+  model.on("msg:custom", (message) => { if (message.kind === "download") save(message.name, message.text); });
   update();
   el.append(column);
 }
