@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from lozenge_engine.pointfile import PointFile
     from lozenge_engine.samples import Draw, Reading
 
-__all__ = ["Failure", "Flight", "Progress", "Workshop"]
+__all__ = ["Failure", "Flight", "Progress", "Workshop", "one_thread", "watch_parent"]
 
 PATIENCE = 0.6
 """A computation younger than this (s) is let finish when a newer request comes, so that a
@@ -139,11 +139,15 @@ class Failure(NamedTuple):
     text: str
 
 
-def _watch_parent(parent: int) -> None:
-    """End this process when its parent is gone, however that ended."""
-    while os.getppid() == parent:
-        time.sleep(1.0)
-    os._exit(1)
+def watch_parent(parent: int) -> None:
+    """Let this process end when its parent is gone, however that ended."""
+
+    def watch() -> None:
+        while os.getppid() == parent:
+            time.sleep(1.0)
+        os._exit(1)
+
+    threading.Thread(target=watch, daemon=True).start()
 
 
 def work(connection: Connection, parent: int) -> None:
@@ -156,7 +160,7 @@ def work(connection: Connection, parent: int) -> None:
     parent : int
         Process whose end ends this one.
     """
-    threading.Thread(target=_watch_parent, args=(parent,), daemon=True).start()
+    watch_parent(parent)
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # the server ends this process itself
     with contextlib.suppress(AttributeError, OSError):
         os.nice(NICENESS)
@@ -181,7 +185,7 @@ def work(connection: Connection, parent: int) -> None:
 
 
 @contextlib.contextmanager
-def _one_thread() -> Iterator[None]:
+def one_thread() -> Iterator[None]:
     """Environment in which a process starts with one thread of linear algebra."""
     names = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
     before = {name: os.environ.get(name) for name in names}
@@ -365,7 +369,7 @@ class Workshop:
             self._process = context.Process(
                 target=work, args=(theirs, os.getpid()), name="sprinklings", daemon=True
             )
-            with _one_thread():
+            with one_thread():
                 self._process.start()
             theirs.close()
         return self._connection

@@ -8,9 +8,10 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from lozenge_dashboard.elsewhere import prepare_elsewhere
 from lozenge_engine.bench import continuum_eigenvalues
 from lozenge_engine.config import Setup
-from lozenge_engine.pipeline import compute
+from lozenge_engine.pipeline import compute, predict, search_key
 from lozenge_engine.pointfile import PointFile
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
@@ -19,6 +20,8 @@ __all__ = ["Picture", "modes_key", "picture_of"]
 
 CONTINUUM_MODES = 400
 """Most eigenvalues of the continuum that are drawn."""
+APART_FROM = 1.0
+"""Predicted seconds from which a dense search gets a process of its own."""
 LEAST_SECONDS = 0.002
 """A stage that took less came from the cache."""
 
@@ -43,6 +46,11 @@ def picture_of(
 
     def work(report: Callable[[str, float], None]) -> Picture:
         config = setup.config()
+        seconds = predict(config).seconds if config.patch_rule.kind == "none" else 0.0
+        if seconds > APART_FROM and stages.peek(search_key(config, points)) is None:
+            prepare_elsewhere(
+                config, points=points, stages=stages, report=report, predicted=seconds
+            )
         result = compute(config, points=points, stages=stages, report=report)
         shown = min(CONTINUUM_MODES, 2 * result.patch.kept_modes + 20)
         return Picture(setup, result, continuum_eigenvalues(config, shown))

@@ -44,6 +44,7 @@ __all__ = [
     "compute",
     "predict",
     "prepare",
+    "search_key",
     "versions",
 ]
 
@@ -105,6 +106,24 @@ def compute(
     if computation.afresh and shared_model().calibrated:
         shared_model().learn(config, sum(result.seconds.values()))
     return result
+
+
+def search_key(config: Config, points: PointFile | None = None) -> tuple[Any, ...]:
+    """Key under which a cache holds the patch's modes of a configuration.
+
+    Parameters
+    ----------
+    config : Config
+        The configuration.
+    points : PointFile or None
+        The imported points, when it asks for them.
+
+    Returns
+    -------
+    tuple
+        Hashable.
+    """
+    return _Computation(config, points, Stages(), None).modes_key
 
 
 def prepare(
