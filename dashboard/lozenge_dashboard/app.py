@@ -23,7 +23,8 @@ ADDRESS = "127.0.0.1"
 FIRST_PORT = 5480
 PORTS_TRIED = 50
 FIRST_LIMIT = 5000
-"""Elements up to which the first picture is computed before a page asks for it."""
+"""Elements up to which the first picture is computed before a page asks for it, and up to which
+one thread searches, since the sprinklings behind the picture need the other cores."""
 WARM_AFTER = 3.0
 """Seconds after the first page was loaded."""
 
@@ -129,7 +130,7 @@ def serve(
     """
     known = shipped()
     first = preset or known[FIRST]
-    stages, ready = Stages(), threading.Event()
+    stages, ready = Stages(threads_from=FIRST_LIMIT), threading.Event()
     threading.Thread(
         target=_first_picture, args=(first.setup, stages, ready), name="first", daemon=True
     ).start()

@@ -13,7 +13,7 @@ from collections.abc import Callable
 from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
-from lozenge_dashboard.jobs import one_thread, watch_parent
+from lozenge_dashboard.jobs import ONE_THREAD, one_thread, watch_parent
 from lozenge_engine.errors import InputError
 
 if TYPE_CHECKING:
@@ -46,7 +46,7 @@ def search(connection: Connection, parent: int, config: Config, points: PointFil
     from lozenge_engine.stages import Stages
 
     try:
-        connection.send(prepare(config, points=points, stages=Stages()))
+        connection.send(prepare(config, points=points, stages=Stages(threads_from=ONE_THREAD)))
     except InputError as error:
         connection.send(error)
 

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from lozenge_engine.pointfile import PointFile
     from lozenge_engine.samples import Draw, Reading
 
-__all__ = ["Failure", "Flight", "Progress", "Workshop", "one_thread", "watch_parent"]
+__all__ = ["ONE_THREAD", "Failure", "Flight", "Progress", "Workshop", "one_thread", "watch_parent"]
 
 PATIENCE = 0.6
 """A computation younger than this (s) is let finish when a newer request comes, so that a
@@ -39,6 +39,8 @@ QUIET = 1.0
 LATE = 3.0
 """A draw that nobody wants any more is given up after this time (s)."""
 NICENESS = 10
+ONE_THREAD = 10**9
+"""More elements than any set has: the search keeps to one thread beside the page."""
 
 
 class Progress(NamedTuple):
@@ -167,7 +169,7 @@ def work(connection: Connection, parent: int) -> None:
     from lozenge_engine.samples import take
     from lozenge_engine.stages import Stages
 
-    stages = Stages()
+    stages = Stages(threads_from=ONE_THREAD)
     while True:
         try:
             draw, points = connection.recv()

@@ -53,8 +53,6 @@ Report = Callable[[str, float], None]
 
 DENSE_LIMIT = 4000
 """Most elements for which every mode is computed (no cut in the first stage)."""
-THREADS_FROM = 2500
-"""Elements above which the search for modes uses all cores (or LOZENGE_THREADS of them)."""
 MARGIN = 0.95
 """Floor of the search, as a multiple of the patch's cut: what lies between is shown as dropped."""
 MARGIN_LIMIT = 20_000
@@ -158,9 +156,9 @@ def prepare(
     return computation.modes_key, stages.peek(computation.modes_key)
 
 
-def _mode_threads(elements: int) -> int:
+def _mode_threads(elements: int, stages: Stages) -> int:
     """Threads for the patch's modes: one keeps a page fluid, a large basis pays for all cores."""
-    if elements <= THREADS_FROM:
+    if elements <= stages.threads_from:
         return 1
     wanted = os.environ.get("LOZENGE_THREADS", "")
     if wanted and not (wanted.isdigit() and int(wanted)):
@@ -281,7 +279,7 @@ class _Computation:
         with self._timed("order"):
             key = ("order", *self.points_key, self.config.mass)
             operator = self.stages.get(key, lambda: self._operator(points))[0]
-        with self._timed("modes"), blas_threads(_mode_threads(operator.size)):
+        with self._timed("modes"), blas_threads(_mode_threads(operator.size, self.stages)):
             patch = self._patch(operator)
         return points, sha256, region_of, patch
 

@@ -26,11 +26,22 @@ class Stages:
     compiled : bool
         Whether compiled loops may be used where the result is the same to the bit; set it once
         `lozenge_engine.kernels.order.warm` has returned.
+    threads_from : int
+        Elements above which the search for modes uses all cores, or LOZENGE_THREADS of them.
+        Threads that wait for a busy core spin: beside other work one thread is up to six times
+        faster (measured, DEVELOPERS.md).
     """
 
-    def __init__(self, *, limit_bytes: int = 1_500_000_000, compiled: bool = False) -> None:
+    def __init__(
+        self,
+        *,
+        limit_bytes: int = 1_500_000_000,
+        compiled: bool = False,
+        threads_from: int = 2500,
+    ) -> None:
         self.limit_bytes = limit_bytes
         self.compiled = compiled
+        self.threads_from = threads_from
         self._entries: OrderedDict[Hashable, tuple[Any, int]] = OrderedDict()
         self._lock = threading.Lock()
 

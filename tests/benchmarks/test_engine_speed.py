@@ -16,9 +16,10 @@ import scipy.linalg
 
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.kernels.gaussian import contributions
-from lozenge_engine.kernels.order import MasslessCommutator
+from lozenge_engine.kernels.order import MasslessCommutator, warm
 from lozenge_engine.kernels.points import membership, sprinkle
 from lozenge_engine.pipeline import compute
+from lozenge_engine.stages import Stages
 
 ELEMENTS = 4000
 SEED = 1
@@ -69,9 +70,11 @@ def _second_stage(w, i_delta, n):
 @pytest.mark.benchmark
 def test_four_thousand_elements_against_dense_routes():
     config = nested(ELEMENTS)
+    warm()  # compiled loops, as in the page and in long runs
     compute(nested(300))  # imports and first calls
-    result, fast = timed(lambda: compute(config))
-    best = min(fast, *(timed(lambda: compute(config))[1] for _ in range(4)))
+    result, fast = timed(lambda: compute(config, stages=Stages(compiled=True)))
+    again = [timed(lambda: compute(config, stages=Stages(compiled=True)))[1] for _ in range(4)]
+    best = min(fast, *again)
     points = sprinkle(density=ELEMENTS / 2, seed=SEED, fixed=True)
     a = MasslessCommutator(points.u, points.v).apply(np.eye(ELEMENTS))
     rows = np.nonzero(membership(points, config.regions) == 0)[0]
