@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from typing import Any, ClassVar
+from typing import Any, ClassVar, cast
 
 import panel as pn
 import param
@@ -57,7 +57,7 @@ class Page(pn.Template):
     ) -> Document:
         """Attach the page to a document; the address of the page carries no state."""
         del location
-        document: Document = doc or pn.state.curdoc
+        document = doc or cast(Document, pn.state.curdoc)
         with document.models.freeze():
             super().server_doc(document, title or "Lozenge", location=False)
         # The figures are found only once the first freeze has ended.

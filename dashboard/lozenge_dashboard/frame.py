@@ -4,14 +4,24 @@ from __future__ import annotations
 
 import html
 from collections.abc import Callable, Iterator
-from typing import Any, ClassVar, NamedTuple
+from typing import Any, ClassVar, NamedTuple, cast
 
 import panel as pn
 import param
 from bokeh.core.property.descriptors import UnsetValueError
 from bokeh.document import Document
-from bokeh.models import BoxZoomTool, FixedTicker, LogAxis, LogTicker, SaveTool
+from bokeh.models import (
+    Axis,
+    BoxZoomTool,
+    ColumnDataSource,
+    FixedTicker,
+    Grid,
+    LogAxis,
+    LogTicker,
+    SaveTool,
+)
 from bokeh.models import Plot as BokehPlot
+from bokeh.models.renderers import GlyphRenderer
 from panel.custom import JSComponent
 
 from lozenge_dashboard.controls import ASSETS
@@ -81,7 +91,7 @@ class _Live:
         """The figure in a document, found once."""
         if self._bokeh is None:
             found = document.select_one({"type": BokehPlot, "name": self.figure.group})
-            if found is not None:
+            if isinstance(found, BokehPlot):
                 self._bokeh = found
                 for name in ("inner_width", "inner_height"):
                     found.on_change(name, self._resized)
@@ -93,16 +103,19 @@ class _Live:
         if plot is None:
             return
         layers = (part for part in data if isinstance(part, Layer))
-        for renderer, layer in zip(plot.renderers, layers, strict=True):
-            renderer.data_source.data = layer.source()
+        # HoloViews draws each layer as glyphs of columns of its own.
+        glyphs = cast(list[GlyphRenderer], plot.renderers)
+        for renderer, layer in zip(glyphs, layers, strict=True):
+            cast(ColumnDataSource, renderer.data_source).data = layer.source()
         keep = self.limits if not settled else None
         self.fit(data.limits if keep is None else data.limits.around(keep))
         ticks = getattr(data, "ticks", None)
         if ticks is not None:
-            axis = plot.left[0]
-            if not isinstance(axis.ticker, FixedTicker):
-                axis.ticker = FixedTicker()
-            axis.ticker.ticks = [at for at, _ in ticks]
+            axis = cast(Axis, plot.left[0])
+            ticker = axis.ticker
+            if not isinstance(ticker, FixedTicker):
+                axis.ticker = ticker = FixedTicker()
+            ticker.ticks = [at for at, _ in ticks]
             axis.major_label_overrides = dict(ticks)
 
     def _resized(self, _name: str, _old: object, _new: object) -> None:
@@ -185,7 +198,7 @@ class _Live:
             if isinstance(axis, LogAxis):
                 axis.ticker = LogTicker(mantissas=[1])
         for grid in plot.center:
-            if hasattr(grid, "grid_line_color"):
+            if isinstance(grid, Grid):
                 grid.grid_line_color = look.rule
                 grid.grid_line_alpha = 0.5
         for tool in plot.toolbar.tools:

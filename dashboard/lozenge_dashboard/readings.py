@@ -5,7 +5,7 @@ from __future__ import annotations
 import html
 import math
 from collections.abc import Sequence
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, NamedTuple, TypedDict
 
 from lozenge_dashboard.records import RULE_NAMES, Scene
 from lozenge_engine.geometry import region_letter
@@ -13,7 +13,8 @@ from lozenge_engine.notation import NO_NUMBER, thousands, with_error
 from lozenge_engine.result import Pair, Result
 
 if TYPE_CHECKING:
-    from lozenge_engine.sweeps import Average, Estimate
+    from lozenge_engine.kernels.scaling import Estimate
+    from lozenge_engine.sweeps import Average
 
 __all__ = ["COLUMNS", "Value", "readings_html", "table_rows", "values"]
 
@@ -55,7 +56,7 @@ class Value(NamedTuple):
     mean: float
     error: float
     scatter: float
-    count: int
+    count: int  # type: ignore[assignment]  # hides tuple.count, which nobody needs here
     present: float
     kept: int | None
     nominal: float
@@ -69,7 +70,17 @@ class Value(NamedTuple):
         return with_error(self.mean, self.error)
 
 
-def _spread(estimate: Estimate | None, present: float) -> dict[str, float | int]:
+class _Averaged(TypedDict):
+    """The fields of a value that come from averaging."""
+
+    mean: float
+    error: float
+    scatter: float
+    count: int
+    present: float
+
+
+def _spread(estimate: Estimate | None, present: float) -> _Averaged:
     """The fields of a value that come from averaging."""
     if estimate is None or estimate.count < 2:
         return {"mean": present, "error": NAN, "scatter": NAN, "count": 1, "present": present}

@@ -13,7 +13,8 @@ from lozenge_engine.result import Result
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-    from lozenge_engine.sweeps import Average, Estimate, ScalingCurve, SeparationCurve
+    from lozenge_engine.kernels.scaling import Estimate
+    from lozenge_engine.sweeps import Average, ScalingCurve, SeparationCurve
 
 __all__ = ["RULE_NAMES", "Choices", "Scene", "Spread", "spread"]
 

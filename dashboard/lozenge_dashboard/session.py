@@ -2,35 +2,28 @@
 
 from __future__ import annotations
 
-from typing import Any, NamedTuple
+from typing import Any, NamedTuple, cast
 
 import panel as pn
+from bokeh.document import Document
 
 from lozenge_dashboard.behind import Backdrop
 from lozenge_dashboard.board import Board
 from lozenge_dashboard.column import Heading, Job, column_state
 from lozenge_dashboard.controls import LIVE_HIGH
-from lozenge_dashboard.exchange import (
-    PAGE_HIGH,
-    Uploads,
-    as_preset,
-    check_size,
-    file_name,
-    too_many,
-)
+from lozenge_dashboard.desk import Desk
+from lozenge_dashboard.exchange import file_name
 from lozenge_dashboard.jobs import Flight, Progress, Workshop
 from lozenge_dashboard.palette import LOOKS
 from lozenge_dashboard.picture import Picture, modes_key, picture_of
 from lozenge_dashboard.records import Choices, Scene
-from lozenge_dashboard.settings import SETTINGS
 from lozenge_dashboard.turn import Turn
-from lozenge_engine.bench import Bench
 from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError
 from lozenge_engine.notation import duration, thousands
 from lozenge_engine.pipeline import predict
-from lozenge_engine.pointfile import PointFile, parse_points
-from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps, parse
+from lozenge_engine.pointfile import PointFile
+from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
 
@@ -65,20 +58,12 @@ class Session:
 
     def __init__(self, server: Server, preset: Preset, *, points: PointFile | None = None) -> None:
         self.server = server
-        self.bench = Bench()
-        self.errors: dict[str, str] = {}
-        self._wanted: Preset | None = None
-        try:
-            check_size(preset.setup)
-            self.bench.load(preset.setup, points=points)
-        except InputError as error:
-            self.errors["preset"] = str(error)
-            self._wanted, preset = preset, server.shipped[FIRST]
-            self.bench.load(preset.setup)
-        self.preset = preset
-        self.theme = preset.view.theme
-        self.focus = preset.view.focus
-        self.choices = _choices(preset.view)
+        self.desk = Desk(preset, server.shipped[FIRST], points=points)
+        self.bench = self.desk.bench
+        view = self.desk.preset.view
+        self.theme = view.theme
+        self.focus = view.focus
+        self.choices = _choices(view)
         self.scene: Scene | None = None
         self.kept: Scene | None = None
         self.failure = ""
@@ -88,10 +73,9 @@ class Session:
         self.settled = True
         self._pressed: Config | None = None
         self._modes_of: object = None
-        self._uploads = Uploads()
         self._answered = 0
         self._computing = False
-        self.turn = Turn(pn.state.curdoc)
+        self.turn = Turn(cast(Document, pn.state.curdoc))  # a page is made in its own document
         self.picture = Flight(self.turn.later(self._pictured), self.turn.later(self._progressed))
         self.backdrop = Backdrop(server.workshop, later=self.turn.later, show=self._gathered)
         self.board = Board(
@@ -163,14 +147,9 @@ class Session:
             self._paint()
             return
         before = self.bench.setup()
-        try:
-            setup = SETTINGS[name].put(before, value)
-            check_size(setup)
-            self.bench.load(setup)
-        except InputError as error:
-            self.errors[name] = str(error)
+        setup = self.desk.put(name, value)
+        if setup is None:
             return
-        self.errors.clear()
         if setup != before:
             self.agreement = ""
             self._request()
@@ -189,7 +168,7 @@ class Session:
             self.kept = None if self.kept else self.scene and self.scene._replace(reference=None)
             self._paint()
         elif name == "back":
-            self._open_preset(self.preset, arrange=False)
+            self._open_preset(self.desk.preset, arrange=False)
         elif name == "save":
             self._save()
         elif name == "compute":
@@ -207,53 +186,29 @@ class Session:
 
     def _open_preset(self, preset: Preset, *, arrange: bool = True) -> None:
         """Show a preset; if it is refused the page keeps its state."""
-        try:
-            check_size(preset.setup)
-            self.bench.load(preset.setup)
-        except InputError as error:
-            self.errors["preset"] = str(error)
-            self._wanted = preset
-            return
-        self.preset, self._wanted = preset, None
-        self.errors.clear()
+        if self.desk.open(preset):
+            self._opened(arrange=arrange)
+
+    def _opened(self, *, arrange: bool = True) -> None:
+        """Look as the preset says that was opened."""
         self.agreement, self.settled = "", True
-        self.choices = _choices(preset.view, self.choices)
+        view = self.desk.preset.view
+        self.choices = _choices(view, self.choices)
         if arrange:
-            self.focus = preset.view.focus
-            if self.theme != preset.view.theme:
+            self.focus = view.focus
+            if self.theme != view.theme:
                 self._act("theme", None)
         self.board.arrange(self.choices, self.focus, self.turn.document)
         self._request()
 
     def _take_part(self, message: dict[str, Any]) -> None:
         """Take a part of a file; the last one opens it."""
-        self.errors.pop("preset", None)
-        try:
-            upload = self._uploads.take(message)
-            if upload is None:
-                return
-            if upload.purpose == "points":
-                self._open_points(upload.data, upload.name)
-            else:
-                self._open_preset(parse(upload.data))
-        except InputError as error:
-            self.errors["preset"] = f"{str(message['name'])[:200]}: {error}"
-
-    def _open_points(self, data: bytes, name: str) -> None:
-        """Use imported points, for the preset that waits for them or for the present setup."""
-        file = parse_points(data, name=name)
-        count = file.points.u.size
-        if count > PAGE_HIGH:
-            raise too_many(count)
-        waiting = self._wanted
-        if waiting is not None and waiting.setup.points.sha256 == file.sha256:
-            self.bench.load(waiting.setup, points=file)
-            self._open_preset(waiting)
-            return
-        self.bench.import_points(file)
-        self.errors.clear()
-        self.agreement, self.settled = "", True
-        self._request()
+        opened = self.desk.take(message)
+        if opened == "preset":
+            self._opened()
+        elif opened == "points":
+            self.agreement, self.settled = "", True
+            self._request()
 
     def _save(self) -> None:
         """Let the browser download the screen as a preset, with the numbers shown."""
@@ -265,13 +220,11 @@ class Session:
             union_rule=self.choices.union_rule,
             scaling_axis=self.choices.scaling,
         )
-        preset = as_preset(
-            self.preset, setup, view, self.scene.result if shown and self.scene else None
-        )
+        preset = self.desk.as_preset(view, self.scene.result if shown and self.scene else None)
         try:
             self.board.controls.download(file_name(preset), dumps(preset))
         except InputError as error:
-            self.errors["preset"] = str(error)
+            self.desk.errors["preset"] = str(error)
 
     # ------------------------------------------------------------ the picture in front
 
@@ -361,8 +314,9 @@ class Session:
 
     def _compare(self, result: Result) -> None:
         """Say whether the sender's numbers agree, while the setup is the sender's."""
-        if self.preset.sender is not None and self.bench.setup() == self.preset.setup:
-            agreement = compare(self.preset, result)
+        preset = self.desk.preset
+        if preset.sender is not None and self.bench.setup() == preset.setup:
+            agreement = compare(preset, result)
             self.agreement, self.differs = (
                 f"Sender's numbers: {agreement.text}.",
                 not agreement.agrees,
@@ -411,22 +365,23 @@ class Session:
         self.board.controls.state = self._state()
 
     def _state(self) -> dict[str, Any]:
+        preset = self.desk.preset
         heading = Heading(
-            title=self.preset.title,
-            sentence=self.preset.sentence,
+            title=preset.title,
+            sentence=preset.sentence,
             agreement=self.agreement,
             differs=self.differs,
-            error=self.errors.get("preset", "") or self.failure,
+            error=self.desk.errors.get("preset", "") or self.failure,
             keeping=self.kept is not None,
             theme=self.theme,
             focus=self.focus,
         )
         state = column_state(
             self.bench,
-            self.preset.setup,
+            preset.setup,
             union_rule=self.choices.union_rule,
-            loaded_union_rule=self.preset.view.union_rule,
-            errors=self.errors,
+            loaded_union_rule=preset.view.union_rule,
+            errors=self.desk.errors,
             seconds=self.seconds,
             heading=heading,
             job=self.job,

@@ -133,10 +133,9 @@ def _fraction(slope: float) -> str:
 def read(scene: Scene, choices: Choices, look: Look) -> Scaling:
     """Lay out the sweep that the switch names."""
     curve: ScalingCurve | None = getattr(scene, choices.scaling)
-    old = getattr(scene.reference, choices.scaling) if scene.reference else None
-    curves = [(old, look.kept, 7.0)] * (old is not None) + [(curve, look.ink, 9.0)] * (
-        curve is not None
-    )
+    old: ScalingCurve | None = getattr(scene.reference, choices.scaling, None)
+    both = ((old, look.kept, 7.0), (curve, look.ink, 9.0))
+    curves = [(each, colour, size) for each, colour, size in both if each is not None]
     limits = EMPTY
     for each, _, _ in curves:
         around = _limits(each)

@@ -8,6 +8,7 @@ from typing import NamedTuple
 
 import holoviews as hv
 import numpy as np
+from numpy.typing import ArrayLike
 
 from lozenge_dashboard.palette import MARKERS, Look
 from lozenge_dashboard.records import Choices, Scene
@@ -37,7 +38,7 @@ BLANK = Sprinkling(Dust(np.empty(0), np.empty(0)), Strokes.of(), Marks.of(), Wor
 """The view before its first record."""
 
 
-def _outline(region: Region, colour: str, width: float, dash: str) -> tuple[object, ...]:
+def _outline(region: Region, colour: str, width: float, dash: str) -> tuple[ArrayLike, ...]:
     """The four sides of a region."""
     t, x = zip(*region.corners, strict=True)
     return x, t, (*x[1:], x[0]), (*t[1:], t[0]), colour, width, dash
