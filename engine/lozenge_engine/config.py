@@ -11,7 +11,7 @@ import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, field, replace
 from types import MappingProxyType
-from typing import Any, Literal
+from typing import Any, Literal, get_args
 
 from lozenge_engine.checks import checked_number, checked_whole
 from lozenge_engine.errors import refuse
@@ -22,6 +22,7 @@ __all__ = [
     "MAX_ELEMENTS",
     "MAX_SEED",
     "MODES",
+    "RULE_KINDS",
     "Averaging",
     "Config",
     "PointSource",
@@ -37,6 +38,7 @@ MAX_ELEMENTS = 1_000_000
 
 PointKind = Literal["poisson", "fixed", "file"]
 RuleKind = Literal["none", "root_count", "union_count", "equal_share", "fixed_number"]
+RULE_KINDS: tuple[RuleKind, ...] = get_args(RuleKind)
 TruncationMode = Literal[
     "two_stages",
     "patch_only",
@@ -116,9 +118,10 @@ class Rule:
     number: int = 20
 
     def __post_init__(self) -> None:
-        kinds = ("none", "root_count", "union_count", "equal_share", "fixed_number")
-        if self.kind not in kinds:
-            raise refuse("rule", given=self.kind, allowed=", ".join(kinds), do="choose one of them")
+        if self.kind not in RULE_KINDS:
+            raise refuse(
+                "rule", given=self.kind, allowed=", ".join(RULE_KINDS), do="choose one of them"
+            )
         alpha = checked_number("alpha", self.alpha, low=0.05, high=20.0, allowed="0.05 to 20")
         # What a kind does not use is set to its default, so that equal rules hash equally.
         scaled = self.kind in ("root_count", "union_count", "equal_share")

@@ -11,8 +11,9 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from lozenge_engine.config import Config
+from lozenge_engine.config import RULE_KINDS, Config, Rule
 from lozenge_engine.geometry import Region, region_letter
+from lozenge_engine.kernels import cuts
 from lozenge_engine.kernels.modes import Certificate
 
 __all__ = ["Pair", "PatchSpectrum", "RegionResult", "Result", "Status", "Triple", "UnionResult"]
@@ -252,6 +253,34 @@ class Result:
         marks = [r.status for r in self.regions] + [u.status for u in self.unions.values()]
         marks += [p.status for p in self.pairs]
         return self.certificate.met and all(mark == "ok" for mark in marks)
+
+    def kept_by_rule(self) -> dict[str, tuple[int, ...]]:
+        """Positive modes that other rules of the second stage would keep in each region.
+
+        Returns
+        -------
+        dict of str to tuple of int
+            For the kinds of rule with this configuration's alpha and number, the first stage left
+            as it is; one count for each region.
+        """
+        rule = self.config.region_rule
+        union = sum(r.elements for r in self.regions)
+        found: dict[str, tuple[int, ...]] = {}
+        for kind in RULE_KINDS:
+            other = Rule(kind=kind, alpha=rule.alpha, number=rule.number)
+            found[kind] = tuple(
+                int(
+                    cuts.keep(
+                        r.eigenvalues,
+                        other,
+                        cut=cuts.threshold(
+                            other, own=r.elements, union=union, regions=len(self.regions)
+                        ),
+                    ).sum()
+                )
+                for r in self.regions
+            )
+        return found
 
     def _rows(self) -> list[tuple[str, str, str]]:
         """Name, value and kept over nominal modes of what a reader asks for first."""

@@ -575,3 +575,11 @@ def test_modes_prepared_elsewhere_are_not_searched_again(monkeypatch: pytest.Mon
     expected = compute(config).regions[0].entropy
     monkeypatch.setattr(modes, "all_modes", None)
     assert compute(config, stages=here).regions[0].entropy == expected
+
+
+def test_counts_of_other_rules_are_what_computing_with_them_keeps() -> None:
+    plain = setup(3)
+    kept = compute(plain.config()).kept_by_rule()
+    for mode in ("two_stages", "union_count", "equal_share", "fixed_number"):
+        result = compute(plain.with_(truncation_mode=mode).config())
+        assert kept[MODES[mode][1]] == tuple(r.kept_modes for r in result.regions)

@@ -29,6 +29,12 @@ class Count(NamedTuple):
     marker: str
 
 
+OTHER_RULES = ("root_count", "union_count", "equal_share", "fixed_number")
+"""Rules of the second stage whose counts stand below the figure."""
+NAMED_REGIONS = 3
+"""Most regions for which they have room."""
+
+
 class Counts(NamedTuple):
     """Rows of kept and nominal modes, the first at the top."""
 
@@ -113,7 +119,7 @@ def draw(data: Counts) -> hv.Overlay:
 def caution(scene: Scene, choices: Choices) -> str:
     """Say what the nominal number is, and when the first stage starves the second."""
     result = scene.result
-    text = "Upright line: nominal 2√n, summed for the union."
+    text = "Upright line: nominal 2√n."
     starved = [
         region_letter(i)
         for i, r in enumerate(result.regions)
@@ -121,4 +127,11 @@ def caution(scene: Scene, choices: Choices) -> str:
     ]
     if starved and scene.setup.rules()[0].kind != "none":
         text += f" The first stage starves {', '.join(starved)}."
+    kept = result.kept_by_rule()
+    if len(result.regions) <= NAMED_REGIONS:
+        each = ", ".join(
+            f"{region_letter(i)} " + "/".join(str(kept[kind][i]) for kind in OTHER_RULES)
+            for i in range(len(result.regions))
+        )
+        text += f" Own/union's/equal/fixed count: {each}."
     return text
