@@ -515,7 +515,15 @@ def sender(**changes: Any) -> Sender:
         "regions": [{**region, "x0": -0.35}, {**region, "x0": 0.35}],
         "union": {"support": union, "direct_sum": dict(union)},
         "mutual_information": [
-            {"a": 0, "b": 1, "gap": 0.1, "support": 0.2, "direct_sum": 0.2, "cross_block": 0.1}
+            {
+                "a": 0,
+                "b": 1,
+                "gap": 0.1,
+                "support": 0.2,
+                "direct_sum": 0.2,
+                "cross_block": 0.1,
+                "status": "ok",
+            }
         ],
         "total_correlation": {"support": 0.2, "direct_sum": math.nan},
         "tripartite_information": [],
