@@ -216,7 +216,7 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         fit=fit,
         note=_fit_note(fit, used, setup, done=count_done(readings, plan), planned=len(plan.draws)),
         reference_slope=calabrese_cardy_slope(ends_inside(regions), order=setup.order)
-        if setup.mass == 0
+        if setup.mass == 0 and all(rule.kind != "none" for rule in setup.rules())
         else None,
         done=count_done(readings, plan),
         planned=len(plan.draws),

@@ -107,6 +107,15 @@ def test_no_error_reaches_the_console(page: Page, address: str) -> None:
     assert said == []
 
 
+def test_a_stale_view_is_half_opaque(bench: Page) -> None:
+    opacity = bench.evaluate(
+        """() => { const view = document.querySelector("#view-scaling");
+          view.classList.add("stale");
+          return getComputedStyle(view.querySelector(".figure .bk-Row")).opacity; }"""
+    )
+    assert opacity == "0.5"
+
+
 def test_moving_separation_moves_regions_and_numbers(bench: Page) -> None:
     before = reading(bench, "I(A:B)")
     where = """() => Bokeh.documents[0].get_model_by_name("Sprinkling").renderers[1]

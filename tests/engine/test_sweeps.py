@@ -365,6 +365,11 @@ def test_the_reference_slope_counts_the_ends_inside_the_patch(
     assert density_curve(setup(**changes), {}).reference_slope == pytest.approx(slope)
 
 
+@pytest.mark.parametrize("mode", ["none", "patch_only", "regions_only"])
+def test_without_both_cuts_there_is_no_reference_slope(mode: str) -> None:
+    assert density_curve(setup(truncation_mode=mode), {}).reference_slope is None
+
+
 def test_a_massive_field_has_no_reference_slope() -> None:
     assert density_curve(setup(mass=1.0), {}).reference_slope is None
 
