@@ -53,7 +53,7 @@ Report = Callable[[str, float], None]
 
 DENSE_LIMIT = 4000
 """Most elements for which every mode is computed (no cut in the first stage)."""
-MARGIN = 0.95
+MARGIN = 0.97
 """Floor of the search, as a multiple of the patch's cut: what lies between is shown as dropped."""
 MARGIN_LIMIT = 20_000
 """Above this many elements the floor is the cut itself."""
