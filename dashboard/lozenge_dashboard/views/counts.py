@@ -73,8 +73,8 @@ def read(scene: Scene, choices: Choices, look: Look) -> Counts:
     places = {row.name: at for row, at in zip(table, y, strict=True)}
     old = [row for row in old if row.name in places]
     top = max(max(row.kept, row.nominal) for row in table)
-    # The widest numbers need about two fifths of the axis.
-    limits = Limits(0.0, 2.3 * max(top, 1.0), 0.4, height + 0.7)
+    # The widest numbers need half of the axis at 150 % zoom.
+    limits = Limits(0.0, 2.8 * max(top, 1.0), 0.4, height + 0.7)
     return Counts(
         lines=Strokes.of(
             *(
