@@ -119,17 +119,7 @@ class Bench(Parameters):
             self._quiet = quiet
 
     @param.depends(
-        "mass",
-        "region_count",
-        "half_width",
-        "separation",
-        "truncation_mode",
-        "alpha",
-        "number",
-        "patch_rule",
-        "region_rule",
-        "order",
-        "sweeps",
+        *Parameters._MIRRORED,
         "density",
         "elements",
         "seed",
