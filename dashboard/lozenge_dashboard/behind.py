@@ -204,6 +204,9 @@ class Backdrop:
         def work(report: Callable[[str, float], None]) -> Curves | None:
             time.sleep(STEP)
             report("curves", 0.0)
+            while workshop.quiet:  # a slider moves: its views come first
+                time.sleep(STEP / 10)
+                report("curves", 0.0)
             return None if self._plans is None else curves(self._plans, workshop)
 
         self._flight.request(work)

@@ -172,6 +172,10 @@ class Board:
         for name, frame in self.frames.items():
             frame.head.stale = reasons.get(name, "")
 
+    def stale_all(self, reason: str) -> None:
+        """Mark every view, for one reason."""
+        self.stale(dict.fromkeys(self.frames, reason))
+
     def restyle(self, look: Look, document: Document) -> None:
         """Take the colours of a theme."""
         for frame in self.frames.values():

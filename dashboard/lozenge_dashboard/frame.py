@@ -28,11 +28,14 @@ from lozenge_dashboard.controls import ASSETS
 from lozenge_dashboard.palette import Look
 from lozenge_dashboard.records import Choices, Scene
 from lozenge_dashboard.views.catalogue import Figure, View
-from lozenge_dashboard.views.marks import FONT, Layer, Limits
+from lozenge_dashboard.views.marks import FONT, Column, Layer, Limits
 
 __all__ = ["Frame", "Head"]
 
 LABEL_SIZE = "13px"
+SHORT = 256
+"""Columns up to this length go within the message; a longer one costs two messages of its own,
+about 1 ms, which a list reaches near this length (measured)."""
 
 
 class Head(JSComponent):
@@ -63,6 +66,11 @@ class _Range(NamedTuple):
     high: float
 
 
+def _packed(column: Column) -> Column | list[Any]:
+    """A short column as a list, which Bokeh sends within the message."""
+    return column.tolist() if column.size <= SHORT else column
+
+
 class _Live:
     """One figure, built once by HoloViews and then fed through the data sources it made."""
 
@@ -77,6 +85,7 @@ class _Live:
             margin=0,
         )
         self.limits: Limits | None = None
+        self._exact: Limits | None = None
         self._bokeh: BokehPlot | None = None
         self._set: dict[str, _Range] = {}
 
@@ -106,7 +115,9 @@ class _Live:
         # HoloViews draws each layer as glyphs of columns of its own.
         glyphs = cast(list[GlyphRenderer], plot.renderers)
         for renderer, layer in zip(glyphs, layers, strict=True):
-            cast(ColumnDataSource, renderer.data_source).data = layer.source()
+            source = cast(ColumnDataSource, renderer.data_source)
+            source.data = {name: _packed(column) for name, column in layer.source().items()}
+        self._exact = data.limits
         keep = self.limits if not settled else None
         self.fit(data.limits if keep is None else data.limits.around(keep))
         ticks = getattr(data, "ticks", None)
@@ -117,6 +128,11 @@ class _Live:
                 axis.ticker = ticker = FixedTicker()
             ticker.ticks = [at for at, _ in ticks]
             axis.major_label_overrides = dict(ticks)
+
+    def settle(self) -> None:
+        """Let the ranges go back to what the columns need."""
+        if self._exact is not None:
+            self.fit(self._exact)
 
     def _resized(self, _name: str, _old: object, _new: object) -> None:
         """Fit again when the browser gives the figure another size."""
@@ -275,11 +291,13 @@ class Frame:
         """Draw a scene, unless what it would show is shown already."""
         live = self._shown(choices)
         live.build(document)
-        drawn = (*self.view.parts(scene), choices, look, settled)
+        drawn = (*self.view.parts(scene), choices, look)
         if len(drawn) == len(self._drawn) and all(
             a is b or (isinstance(a, float | bool) and a == b)
             for a, b in zip(drawn, self._drawn, strict=True)
         ):
+            if settled:
+                live.settle()
             return
         self._drawn = drawn
         live.show(live.figure.read(scene, choices, look), document, settled=settled)

@@ -237,6 +237,11 @@ class Workshop:
         """Begin no new draw for a second: a page is busy in front."""
         self._quiet_until = time.monotonic() + QUIET
 
+    @property
+    def quiet(self) -> bool:
+        """Whether a page was busy in front within the last second."""
+        return time.monotonic() < self._quiet_until
+
     def replace(
         self,
         page: object,

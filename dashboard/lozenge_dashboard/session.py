@@ -232,10 +232,11 @@ class Session:
         """Compute the present setup, or offer to."""
         setup = self.bench.setup()
         self.failure = ""
-        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "computing …"))
         if not self._live(setup):
             self._offer(setup)
             return
+        if self._modes_of != modes_key(setup):  # else there is hardly time to read it
+            self.board.stale_all("computing …")
         self.job = Job()
         work = picture_of(setup, points=self.bench.file, stages=self.server.stages)
         self.server.workshop.wait()
@@ -258,13 +259,14 @@ class Session:
         elements = thousands(round(2 * setup.points.density))
         seconds = duration(predict(setup.config()).seconds)
         self.job = Job(f"{elements} elements: about {seconds}", None, can_compute=True)
-        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "earlier"))
+        self.board.stale_all("earlier")
         self.board.status("")
 
     def _progressed(self, progress: Progress) -> None:
         """Say what is computed and for how long, unless it was stopped since."""
         if not self._computing:
             return
+        self.board.stale_all("computing …")
         text = f"{progress.stage}, {duration(progress.seconds)}"
         self.board.status(text, busy=True)
         if progress.seconds > 1.0:
@@ -307,7 +309,7 @@ class Session:
         """Keep the last good picture and say below the views why there is no newer one."""
         known = isinstance(error, InputError)
         self.failure = str(error) if known else f"{type(error).__name__}: {error}"
-        self.board.stale(dict.fromkeys((*FRONT, *SWEEPS), "earlier"))
+        self.board.stale_all("earlier")
         place = "spectrum" if "patch rule" in self.failure else "sprinkling"
         self.board.frames[place].say(self.failure, error=True)
         self.board.status("not computed")

@@ -7,6 +7,7 @@ sprinklings (and the patch modes) of the average.
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
@@ -34,6 +35,8 @@ FloatArray = NDArray[np.float64]
 
 BRANCH = 10_000
 """Realisations set aside for each rung of the density ladder."""
+RECENT = 16
+"""Plans kept: curves are read again with every finished draw, and planning took half of that."""
 
 
 class Plan(NamedTuple):
@@ -91,6 +94,7 @@ def placements(setup: Setup, regions: tuple[Region, ...]) -> tuple[tuple[Region,
     return (regions,) if setup.points.kind == "file" else mirror_images(regions)
 
 
+@lru_cache(maxsize=RECENT)
 def average_draws(setup: Setup) -> Plan:
     """Draws of the average at the present geometry.
 
@@ -109,6 +113,7 @@ def average_draws(setup: Setup) -> Plan:
     return Plan(np.empty(0), draws, (), ())
 
 
+@lru_cache(maxsize=RECENT)
 def density_draws(setup: Setup) -> Plan:
     """Draws of the density ladder at fixed geometry, one sprinkling each.
 
@@ -191,6 +196,7 @@ def scaled(regions: tuple[Region, ...], factor: float) -> tuple[Region, ...]:
     )
 
 
+@lru_cache(maxsize=RECENT)
 def size_draws(setup: Setup) -> Plan:
     """Draws of the size sweep at fixed density: the whole set of regions is scaled.
 
@@ -229,6 +235,7 @@ def size_draws(setup: Setup) -> Plan:
     return Plan(np.array([factor for factor, _ in kept]), draws, (), tuple(left_out))
 
 
+@lru_cache(maxsize=RECENT)
 def separation_draws(setup: Setup) -> Plan:
     """Draws of the separation sweep at fixed density and size, from touching to what fits.
 

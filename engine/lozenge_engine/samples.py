@@ -6,6 +6,7 @@ import hashlib
 import json
 from collections.abc import Callable
 from dataclasses import asdict, dataclass, replace
+from functools import cached_property
 from typing import NamedTuple
 
 import numpy as np
@@ -23,7 +24,7 @@ __all__ = ["Draw", "Reading", "reading_of", "take"]
 FloatArray = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, kw_only=True)
 class Draw:
     """A sprinkling and the layouts of regions to read from its patch modes.
 
@@ -38,7 +39,7 @@ class Draw:
     config: Config
     layouts: tuple[tuple[Region, ...], ...]
 
-    @property
+    @cached_property
     def key(self) -> str:
         """SHA-256, in hexadecimal, of everything that the readings depend on."""
         rest = json.dumps(

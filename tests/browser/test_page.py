@@ -155,6 +155,7 @@ def test_words_where_a_number_belongs_are_refused_in_place(bench: Page) -> None:
 
 
 def test_latest_value_wins_after_dragging(bench: Page) -> None:
+    bench.locator("#elements-range").wait_for()
     bench.evaluate(
         """async () => {
           const find = (root) => { for (const e of root.querySelectorAll("*")) {
