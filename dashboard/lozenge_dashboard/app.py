@@ -144,7 +144,7 @@ def serve(
 
     warming = threading.Timer(WARM_AFTER, _warm, args=(stages,))
     warming.daemon = True
-    factory, close = pages(first, known, stages, path=path, ready=ready, loaded=_once(warming))
+    factories, close = pages(first, known, stages, path=path, ready=ready, loaded=_once(warming))
     import panel as pn
 
     options: dict[str, Any] = {
@@ -161,7 +161,7 @@ def serve(
         # Idle threads of a larger pool spin and slow the page's small matrices tenfold; the engine
         # asks for more threads where they pay.
         with blas_threads(1):
-            server = pn.serve({"/": factory}, **options)
+            server = pn.serve(factories, **options)
             server.start()
             _say(f"Lozenge is at {address} (Ctrl-C ends it).")
             if browser:

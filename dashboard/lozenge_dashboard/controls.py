@@ -11,9 +11,21 @@ from panel.custom import JSComponent
 
 from lozenge_engine.geometry import MAX_REGIONS
 
-__all__ = ["GROUPS", "POINTS_LIMIT", "PRESET_LIMIT", "Controls", "Field", "Group"]
+__all__ = [
+    "ASSETS",
+    "FIELDS_JS",
+    "GROUPS",
+    "POINTS_LIMIT",
+    "PRESET_LIMIT",
+    "Controls",
+    "Field",
+    "Group",
+    "as_plain",
+]
 
 ASSETS = Path(__file__).parent / "assets"
+FIELDS_JS = (ASSETS / "fields.js").read_text(encoding="utf-8")
+"""Native inputs, which every column of controls is made of."""
 LIVE_LOW, LIVE_HIGH = 200, 5000
 """Ends of the elements' slider: what is computed while it is dragged."""
 POINTS_LIMIT = 40_000_000
@@ -261,7 +273,8 @@ SWEEPS = Group(
 GROUPS = (POINTS, REGIONS, MODES, AVERAGING, SWEEPS)
 
 
-def _as_dict(group: Group) -> dict[str, Any]:
+def as_plain(group: Group) -> dict[str, Any]:
+    """A group as plain values, for the browser."""
     return {**group._asdict(), "fields": [field._asdict() for field in group.fields]}
 
 
@@ -280,12 +293,14 @@ class Controls(JSComponent):
         "`costs` by group, `page` (heading) and `job` (work in progress)."
     )
 
-    _esm = ASSETS / "controls.js"
+    campaign = param.String(doc="Address of the campaign page for this screen.")
+
+    _esm: ClassVar[str] = FIELDS_JS + (ASSETS / "controls.js").read_text(encoding="utf-8")
     _stylesheets: ClassVar[list[str]] = [(ASSETS / "controls.css").read_text(encoding="utf-8")]
 
     def __init__(self, receive: Callable[[dict[str, Any]], None], **params: Any) -> None:
         self._receive = receive
-        super().__init__(groups=[_as_dict(group) for group in GROUPS], **params)
+        super().__init__(groups=[as_plain(group) for group in GROUPS], **params)
 
     def _handle_msg(self, data: Any) -> None:
         self._receive(data)

@@ -13,7 +13,8 @@ from collections.abc import Callable
 from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
-from lozenge_dashboard.jobs import ONE_THREAD, one_thread, watch_parent
+from lozenge_dashboard.jobs import ONE_THREAD
+from lozenge_engine.workers import one_thread, watch_parent
 from lozenge_engine.errors import InputError
 
 if TYPE_CHECKING:

@@ -102,6 +102,7 @@ def as_preset(loaded: Preset, setup: Setup, view: ViewState, result: Result | No
         sentence=loaded.sentence,
         invented=loaded.invented,
         setup=setup,
+        campaign=loaded.campaign,
         view=view,
         sender=sender,
     )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import html
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any, ClassVar, NamedTuple, cast
 
 import panel as pn
@@ -12,6 +12,7 @@ from bokeh.core.property.descriptors import UnsetValueError
 from bokeh.document import Document
 from bokeh.models import (
     Axis,
+    BasicTicker,
     BoxZoomTool,
     ColumnDataSource,
     FixedTicker,
@@ -26,7 +27,6 @@ from panel.custom import JSComponent
 
 from lozenge_dashboard.controls import ASSETS
 from lozenge_dashboard.palette import Look
-from lozenge_dashboard.records import Choices, Scene
 from lozenge_dashboard.views.catalogue import Figure, View
 from lozenge_dashboard.views.marks import FONT, Column, Layer, Limits
 
@@ -71,6 +71,20 @@ def _packed(column: Column) -> Column | list[Any]:
     return column.tolist() if column.size <= SHORT else column
 
 
+def _place_ticks(axis: Axis, ticks: Sequence[tuple[float, str]] | None) -> None:
+    """Give an axis ticks in words; its own come back with none, and None changes nothing."""
+    if ticks is None:
+        return
+    if not ticks:
+        if isinstance(axis.ticker, FixedTicker):
+            axis.update(ticker=BasicTicker(), major_label_overrides={})
+        return
+    if not isinstance(axis.ticker, FixedTicker):
+        axis.ticker = FixedTicker()
+    axis.ticker.ticks = [at for at, _ in ticks]
+    axis.major_label_overrides = dict(ticks)
+
+
 class _Live:
     """One figure, built once by HoloViews and then fed through the data sources it made."""
 
@@ -83,6 +97,7 @@ class _Live:
             sizing_mode="stretch_both",
             min_height=120,
             margin=0,
+            linked_axes=False,
         )
         self.limits: Limits | None = None
         self._exact: Limits | None = None
@@ -120,14 +135,11 @@ class _Live:
         self._exact = data.limits
         keep = self.limits if not settled else None
         self.fit(data.limits if keep is None else data.limits.around(keep))
-        ticks = getattr(data, "ticks", None)
-        if ticks is not None:
-            axis = cast(Axis, plot.left[0])
-            ticker = axis.ticker
-            if not isinstance(ticker, FixedTicker):
-                axis.ticker = ticker = FixedTicker()
-            ticker.ticks = [at for at, _ in ticks]
-            axis.major_label_overrides = dict(ticks)
+        axes = cast(Axis, plot.below[0]), cast(Axis, plot.left[0])
+        for axis, name in zip(axes, ("x_ticks", "ticks"), strict=True):
+            _place_ticks(axis, getattr(data, name, None))
+        for axis, text in zip(axes, getattr(data, "labels", ()), strict=False):
+            axis.axis_label = text
 
     def settle(self) -> None:
         """Let the ranges go back to what the columns need."""
@@ -261,7 +273,7 @@ class Frame:
         """The figures' panes by the group of their figure."""
         return {live.figure.group: live.pane for live in self._live.values()}
 
-    def _shown(self, choices: Choices) -> _Live:
+    def _shown(self, choices: Any) -> _Live:
         """The figure at the present switch; the others are hidden and not fed."""
         choice = getattr(choices, self.view.name, "")
         return self._live.get(choice) or self._live[""]
@@ -274,7 +286,7 @@ class Frame:
     def _all(self) -> Iterator[_Live]:
         yield from self._live.values()
 
-    def arrange(self, choices: Choices, focus: str | None) -> None:
+    def arrange(self, choices: Any, focus: str | None) -> None:
         """Show the figure that the switch names, and whether this view has the room."""
         shown = self._shown(choices)
         if all(live.pane.object is None for live in self._all()):
@@ -286,7 +298,7 @@ class Frame:
         )
 
     def show(
-        self, scene: Scene, choices: Choices, look: Look, document: Document, *, settled: bool
+        self, scene: Any, choices: Any, look: Look, document: Document, *, settled: bool
     ) -> None:
         """Draw a scene, unless what it would show is shown already."""
         live = self._shown(choices)

@@ -14,18 +14,19 @@ import signal
 import threading
 import time
 from collections import OrderedDict
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from multiprocessing.connection import Connection
 from multiprocessing.process import BaseProcess
 from typing import TYPE_CHECKING, Any, NamedTuple
 
 from lozenge_engine.errors import Cancelled
+from lozenge_engine.workers import one_thread, watch_parent
 
 if TYPE_CHECKING:
     from lozenge_engine.pointfile import PointFile
     from lozenge_engine.samples import Draw, Reading
 
-__all__ = ["ONE_THREAD", "Failure", "Flight", "Progress", "Workshop", "one_thread", "watch_parent"]
+__all__ = ["ONE_THREAD", "Failure", "Flight", "Progress", "Workshop"]
 
 PATIENCE = 0.6
 """A computation younger than this (s) is let finish when a newer request comes, so that a
@@ -141,17 +142,6 @@ class Failure(NamedTuple):
     text: str
 
 
-def watch_parent(parent: int) -> None:
-    """Let this process end when its parent is gone, however that ended."""
-
-    def watch() -> None:
-        while os.getppid() == parent:
-            time.sleep(1.0)
-        os._exit(1)
-
-    threading.Thread(target=watch, daemon=True).start()
-
-
 def work(connection: Connection, parent: int) -> None:
     """Take draws from a connection and send back their readings, until it closes.
 
@@ -184,22 +174,6 @@ def work(connection: Connection, parent: int) -> None:
             connection.send(outcome)
         except OSError:
             return
-
-
-@contextlib.contextmanager
-def one_thread() -> Iterator[None]:
-    """Environment in which a process starts with one thread of linear algebra."""
-    names = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS")
-    before = {name: os.environ.get(name) for name in names}
-    os.environ.update(dict.fromkeys(names, "1"))
-    try:
-        yield
-    finally:
-        for name, value in before.items():
-            if value is None:
-                del os.environ[name]
-            else:
-                os.environ[name] = value
 
 
 class _Queue(NamedTuple):

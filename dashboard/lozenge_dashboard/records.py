@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from lozenge_engine.kernels.scaling import Estimate
     from lozenge_engine.sweeps import Average, ScalingCurve, SeparationCurve
 
-__all__ = ["RULE_NAMES", "Choices", "Scene", "Spread", "spread"]
+__all__ = ["RULE_NAMES", "CampaignChoices", "Choices", "Scene", "Spread", "spread"]
 
 UnionRule = Literal["support", "direct_sum"]
 
@@ -31,6 +31,12 @@ class Choices(NamedTuple):
     entropies: Literal["values", "modes"] = "values"
     scaling: Literal["density", "size"] = "density"
     separation: Literal["mutual", "union"] = "mutual"
+
+
+class CampaignChoices(NamedTuple):
+    """What the switches of a campaign's views say."""
+
+    quantity: Literal["entropy", "mutual"] = "entropy"
 
 
 class Spread(NamedTuple):

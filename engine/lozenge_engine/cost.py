@@ -19,12 +19,16 @@ from lozenge_engine.kernels import cuts, modes
 from lozenge_engine.kernels.order import MasslessCommutator
 from lozenge_engine.kernels.points import sprinkle
 
-__all__ = ["CostModel", "Prediction", "predict", "shared_model"]
+__all__ = ["CostModel", "Prediction", "nominal", "predict", "shared_model"]
 
 CACHED_BYTES = 32e6
 """Bases up to this size stay in the processor's cache."""
 BASE_BYTES = 250e6
 """The interpreter with the engine loaded."""
+SECOND_STAGE_CALLS = 2e-3
+"""Seconds of a second stage besides its flops (measured)."""
+NOMINAL_RATES = (1.0e10, 1.0e10)
+"""Flops per second with the basis in cache, and out of it, for ratios of costs."""
 
 
 class Prediction(NamedTuple):
@@ -36,10 +40,13 @@ class Prediction(NamedTuple):
         For the seed's own sprinkling, nothing cached.
     peak_bytes : float
         Including the interpreter.
+    second_stage : float
+        The part of the seconds that another layout of regions takes on the same patch modes.
     """
 
     seconds: float
     peak_bytes: float
+    second_stage: float
 
 
 class _Work(NamedTuple):
@@ -51,6 +58,7 @@ class _Work(NamedTuple):
     applications: float
     basis_bytes: float
     peak_bytes: float
+    second_flops: float
 
 
 def _counted(config: Config) -> _Work:
@@ -58,13 +66,13 @@ def _counted(config: Config) -> _Work:
     n = PATCH_AREA * config.points.density
     floor = cuts.needed_floor(config.patch_rule, elements=round(n))
     if floor == 0.0:
-        return _Work(n, n, 9.0 * n**3, n, 16.0 * n**2, 48.0 * n**2 + BASE_BYTES)
+        second = _second_stage(config, n / 2)
+        return _Work(n, n, 9.0 * n**3, n, 16.0 * n**2, 48.0 * n**2 + BASE_BYTES, second)
     r = min(n / 2, n / (2 * math.pi * floor))
     m = min(n, modes.RATIO * r + 24)
     search = 2 * n * m**2 + 2 * n * m * r + 256 * n * m
     check = 2 * n * (m / 4) * (2 * r) + n * m**2 / 8 + 4 * n * r**2
-    inside = sum(region.area for region in config.regions) * config.points.density
-    second = 8 * inside * r**2 + 300.0 * (len(config.regions) + 1) ** 2 * min(r, inside) ** 3 / 4
+    second = _second_stage(config, r)
     basis = 8 * n * m
     return _Work(
         n,
@@ -73,7 +81,14 @@ def _counted(config: Config) -> _Work:
         1.25 * m + 2 * r,
         basis,
         1.1 * basis + 16 * n * r + BASE_BYTES,
+        second,
     )
+
+
+def _second_stage(config: Config, r: float) -> float:
+    """Flops of restriction, cut and entropies with r kept modes of the patch."""
+    inside = sum(region.area for region in config.regions) * config.points.density
+    return 8 * inside * r**2 + 300.0 * (len(config.regions) + 1) ** 2 * min(r, inside) ** 3 / 4
 
 
 class CostModel:
@@ -107,17 +122,9 @@ class CostModel:
         Prediction
             Meant to be good to about 30 % once `learn` has seen computations of similar size.
         """
-        work = _counted(config)
-        seconds = self._raw(config, work) * self._correction.get(_kind_of_work(config), 1.0)
-        return Prediction(seconds, work.peak_bytes)
-
-    def _raw(self, config: Config, work: _Work) -> float:
-        """Seconds before correction."""
-        cached, memory = self._calibrated()
-        rate = cached if work.basis_bytes < CACHED_BYTES else min(cached, memory)
-        per_element = 2.0e-8 if config.mass == 0 else 1.5e-8 * math.log2(work.elements)
-        calls = 4e-5 * work.applications
-        return work.flops / rate + per_element * work.elements * work.applications + calls
+        correction = self._correction.get(_kind_of_work(config), 1.0)
+        whole, second = _seconds(config, *self._calibrated())
+        return Prediction(whole * correction, _counted(config).peak_bytes, second * correction)
 
     def learn(self, config: Config, seconds: float) -> float:
         """Take into account what a computation took.
@@ -138,6 +145,33 @@ class CostModel:
         kind = _kind_of_work(config)
         self._correction[kind] = self._correction.get(kind, 1.0) * math.sqrt(ratio)
         return ratio
+
+
+def _seconds(config: Config, cached: float, memory: float) -> tuple[float, float]:
+    """Seconds at two flop rates: of everything, and of the second stage in it."""
+    work = _counted(config)
+    rate = cached if work.basis_bytes < CACHED_BYTES else min(cached, memory)
+    per_element = 2.0e-8 if config.mass == 0 else 1.5e-8 * math.log2(work.elements)
+    calls = 4e-5 * work.applications
+    first = per_element * work.elements * work.applications + calls
+    return work.flops / rate + first, work.second_flops / rate + SECOND_STAGE_CALLS
+
+
+def nominal(config: Config) -> Prediction:
+    """Predict for a processor of fixed speed, so that the answer is the same on every machine.
+
+    Parameters
+    ----------
+    config : Config
+        What would be computed.
+
+    Returns
+    -------
+    Prediction
+        Good for ratios of costs.
+    """
+    whole, second = _seconds(config, *NOMINAL_RATES)
+    return Prediction(whole, _counted(config).peak_bytes, second)
 
 
 def _kind_of_work(config: Config) -> tuple[int, bool, str]:

@@ -16,8 +16,16 @@ from lozenge_engine.agreement import Agreement, Sender, compare_numbers
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.document import parse_json, read_bytes, write_bytes
 from lozenge_engine.placement import gaps
+from lozenge_engine.plan import CampaignPlan
 from lozenge_engine.schema import FORMAT, FORMAT_KEY, check_document, folder
-from lozenge_engine.sections import DEFAULT, at, sections_of, setup_of
+from lozenge_engine.sections import (
+    DEFAULT,
+    at,
+    campaign_of,
+    campaign_section,
+    sections_of,
+    setup_of,
+)
 
 if TYPE_CHECKING:
     from lozenge_engine.result import Result
@@ -89,6 +97,8 @@ class Preset:
         Whether the scenario they speak of is made up.
     setup : Setup
         Engine and sweep settings; brought to its `canonical` form.
+    campaign : CampaignPlan or None
+        What a campaign over this setup is to find out.
     view : ViewState
         Arrangement of the page.
     sender : Sender or None
@@ -99,6 +109,7 @@ class Preset:
     sentence: str
     invented: bool = False
     setup: Setup = field(default_factory=Setup)
+    campaign: CampaignPlan | None = None
     view: ViewState = field(default_factory=ViewState)
     sender: Sender | None = None
 
@@ -176,8 +187,10 @@ def _document(preset: Preset) -> dict[str, Any]:
         "sentence": preset.sentence,
         "invented": preset.invented,
         **sections_of(preset.setup),
-        "view": asdict(preset.view),
     }
+    if preset.campaign is not None:
+        document["campaign"] = campaign_section(preset.campaign)
+    document["view"] = asdict(preset.view)
     if preset.sender is not None:
         document["sender"] = {
             "points_sha256": preset.sender.points_sha256,
@@ -228,12 +241,14 @@ def parse(text: str | bytes) -> Preset:
     """
     document = parse_json(text)
     check_document(document)
+    campaign = document.get("campaign")
     sender = document.get("sender")
     return Preset(
         title=document["title"],
         sentence=document["sentence"],
         invented=document["invented"],
         setup=setup_of(document),
+        campaign=None if campaign is None else campaign_of(campaign),
         view=ViewState(**document["view"]),
         sender=Sender(**sender) if sender else None,
     )

@@ -137,7 +137,7 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     fraction = count_relations(points.u, points.v) / (n * (n - 1) / 2) if n > 1 else float("nan")
     samples: list[Sample] = []
     reason = ""
-    stages = Stages(threads_from=ONE_THREAD)
+    stages = Stages(threads_from=ONE_THREAD, compiled=True)
     try:
         for i in own.cells:
             cell = layout.cells[i]

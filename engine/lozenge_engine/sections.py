@@ -11,8 +11,9 @@ from lozenge_engine.config import Averaging, PointSource, Rule, Setup, SweepPlan
 from lozenge_engine.errors import InputError
 from lozenge_engine.geometry import Region
 from lozenge_engine.placement import gaps
+from lozenge_engine.plan import Axis, CampaignPlan, Target
 
-__all__ = ["DEFAULT", "at", "sections_of", "setup_of"]
+__all__ = ["DEFAULT", "at", "campaign_of", "campaign_section", "sections_of", "setup_of"]
 
 DEFAULT = Setup()
 
@@ -176,3 +177,64 @@ def _truncation(section: Mapping[str, Any]) -> dict[str, Any]:
         "alpha": float(section["alpha"]),
         "number": int(section["number"]),
     }
+
+
+# ----------------------------------------------------------------------- campaign
+
+
+def campaign_section(plan: CampaignPlan) -> dict[str, Any]:
+    """Write a campaign's plan as plain values, in the order of the file.
+
+    Parameters
+    ----------
+    plan : CampaignPlan
+        What a campaign is to find out.
+
+    Returns
+    -------
+    dict
+        Keys axes, placements, realisations, target, budget and smallest_region.
+    """
+    return {
+        "axes": [{"name": axis.name, "values": list(axis.values)} for axis in plan.axes],
+        "placements": [list(shift) for shift in plan.placements],
+        "realisations": plan.realisations,
+        "target": None if plan.target is None else asdict(plan.target),
+        "budget": plan.budget,
+        "smallest_region": plan.smallest_region,
+    }
+
+
+def campaign_of(section: Mapping[str, Any]) -> CampaignPlan:
+    """Build a campaign's plan, so that a refusal can name its key.
+
+    Parameters
+    ----------
+    section : mapping
+        The section ``campaign`` of a preset document that fits the schema.
+
+    Returns
+    -------
+    CampaignPlan
+        Checked in full.
+
+    Raises
+    ------
+    InputError
+        If the values do not go together, such as two axes of one name.
+    """
+    axes = []
+    for k, entry in enumerate(section["axes"]):
+        with at(f"campaign.axes[{k}]"):
+            counts = entry["name"] == "region_count"
+            values = (int(v) if counts else v for v in entry["values"])
+            axes.append(Axis(name=entry["name"], values=tuple(values)))
+    with at("campaign"):
+        return CampaignPlan(
+            axes=tuple(axes),
+            placements=tuple((t, x) for t, x in section["placements"]),
+            realisations=int(section["realisations"]),
+            target=None if section["target"] is None else Target(**section["target"]),
+            budget=section["budget"],
+            smallest_region=int(section["smallest_region"]),
+        )

@@ -8,7 +8,7 @@ from typing import Any, NamedTuple
 import holoviews as hv
 
 from lozenge_dashboard.palette import Look
-from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.records import Scene
 from lozenge_dashboard.views import counts, entropies, scaling, separation, spectrum, sprinkling
 from lozenge_dashboard.views.marks import register
 
@@ -24,7 +24,8 @@ class Figure(NamedTuple):
         Its name, unique on the page.
     read : callable
         (scene, choices, look) -> a NamedTuple of the figure's layers from the bottom up, then
-        its `limits` and, where they are words, its `ticks` on the y axis.
+        its `limits` and, where they are words or change, `ticks` on the y axis, `x_ticks` and the
+        `labels` of both axes.
     draw : callable
         Columns -> HoloViews overlay.
     blank : NamedTuple
@@ -34,7 +35,7 @@ class Figure(NamedTuple):
     """
 
     group: str
-    read: Callable[[Scene, Choices, Look], Any]
+    read: Callable[[Any, Any, Look], Any]
     draw: Callable[[Any], hv.Overlay]
     blank: Any
     axes: dict[str, Any]
@@ -60,8 +61,8 @@ class View(NamedTuple):
     name: str
     question: str
     figures: dict[str, Figure]
-    caution: Callable[[Scene, Choices], str]
-    parts: Callable[[Scene], tuple[Any, ...]]
+    caution: Callable[[Any, Any], str]
+    parts: Callable[[Any], tuple[Any, ...]]
     options: tuple[tuple[str, str], ...] = ()
 
 

@@ -1,0 +1,365 @@
+"""What the command line says of a results file: tables, fits, cautions."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+
+from lozenge_dashboard.campaign_plan import fits_it, share, target_text, value_text
+from lozenge_dashboard.curves import aligned, wrapped
+from lozenge_engine.estimates import CellEstimate, Estimates, FitOf, Regime
+from lozenge_engine.geometry import PATCH_AREA
+from lozenge_engine.kernels.gls import LineFit, Reduction, SlopeReport, reduction
+from lozenge_engine.notation import NO_NUMBER, duration, thousands, two_digits, with_error
+from lozenge_engine.store import Results
+
+__all__ = [
+    "controls",
+    "prediction",
+    "report_text",
+    "trusted",
+]
+
+MODEL_WORDS = {
+    "log": "S = b ln(l/a) + c",
+    "log_root": "S = b ln(l/a) + c + d/sqrt(n)",
+    "volume": "S = a n + c",
+}
+"""The laws that a fit compares; n is the expected number of elements of the smallest region."""
+WORTH_IT = 1.5
+"""Ratio of variances from which control variates would earn a place in the means."""
+
+
+def trusted(found: Estimates) -> bool:
+    """Whether nothing failed and no sample carries a mark.
+
+    Parameters
+    ----------
+    found : Estimates
+        What the samples say.
+
+    Returns
+    -------
+    bool
+        False calls for status 3.
+    """
+    return found.failed == 0 and not any(cell.untrusted for cell in found.cells)
+
+
+def report_text(results: Results, found: Estimates) -> str:
+    """Write what a results file holds for a person to read.
+
+    Parameters
+    ----------
+    results : Results
+        Open.
+    found : Estimates
+        What its samples say.
+
+    Returns
+    -------
+    str
+        Paragraphs; the last line ends with a newline.
+    """
+    blocks = [_heading(results, found), aligned(_point_rows(results, found))]
+    blocks.append("\n".join(map(wrapped, _legend(results, found))))
+    blocks += [_fit_text(results, fit) for fit in found.fits]
+    if not found.fits:
+        blocks.append("no fit: neither density nor half_width is an axis")
+    blocks.append("\n".join(map(wrapped, _closing(results, found))))
+    return "\n\n".join(blocks) + "\n"
+
+
+def _heading(results: Results, found: Estimates) -> str:
+    preset, layout = results.preset, results.design
+    mark = " (invented scenario)" if preset.invented else ""
+    counts = (
+        f"{thousands(found.done, space=' ')} realisations of {len(layout.sprinklings)} "
+        f"sprinkling{'s' if len(layout.sprinklings) > 1 else ''}, {found.failed} failed, "
+        f"{duration(found.cpu_seconds)} of CPU time in {duration(results.elapsed)}"
+    )
+    target = layout.plan.target
+    wanted = []
+    if target is not None:
+        reached = found.history[-1][1] if found.history else math.nan
+        wanted.append(f"wanted: {target_text(target)}; reached: {share(reached, target)}")
+    return "\n".join([f"{preset.title}{mark}", wrapped(preset.sentence), counts, *wanted])
+
+
+# ----------------------------------------------------------------------- points
+
+
+def _point_rows(results: Results, found: Estimates) -> list[list[str]]:
+    """One row for each point and placement class."""
+    layout = results.design
+    names = [axis.name for axis in layout.plan.axes]
+    classes = len(layout.plan.placements) > 1
+    several = any(len(cell.regions) > 1 for cell in found.cells)
+    head = [*(name.replace("_", " ") for name in names), *(["class"] if classes else [])]
+    head += ["elements", "done", "S support" if several else "S"]
+    if several:
+        head += ["S direct sum", "I support", "I direct sum", "cross"]
+    rows = [[*head, "kept", ""]]
+    for number in found.cells:
+        cell = layout.cells[number.cell]
+        values = layout.points[cell.point].values
+        row = [value_text(values[name]) for name in names]
+        row += [str(cell.placement + 1)] if classes else []
+        row += [f"{cell.elements:.0f}", str(number.entropy.count), _estimate(number, "entropy")]
+        if several:
+            row += [_estimate(number, "direct_sum"), _estimate(number, "mutual_information")]
+            row += [_estimate(number, "mutual_direct_sum"), _decimals(number.cross_block)]
+        rows.append([*row, _decimals(number.kept_ratio), _marks(results, number)])
+    return rows
+
+
+def _estimate(number: CellEstimate, name: str) -> str:
+    """A mean with its error; one realisation has none, and then no number stands there."""
+    estimate = getattr(number, name)
+    if estimate is None:
+        return ""
+    if estimate.count < 2:
+        return f"{with_error(estimate.mean)}(?)" if estimate.count else NO_NUMBER
+    mark = "*" if number.untrusted else ""
+    return with_error(estimate.mean, estimate.error) + mark
+
+
+def _decimals(x: float) -> str:
+    return f"{x:.2f}" if math.isfinite(x) else NO_NUMBER
+
+
+def _marks(results: Results, number: CellEstimate) -> str:
+    """What is to be known of a row besides its numbers."""
+    marks = [f"{number.untrusted} untrusted"] if number.untrusted else []
+    if not fits_it(results.design.cells[number.cell].elements, results.design.plan):
+        marks.append("not fitted")
+    return ", ".join(marks)
+
+
+def _legend(results: Results, found: Estimates) -> list[str]:
+    """What the columns mean, and what is not among the points."""
+    notes = [
+        "S in nats, of all regions together; elements: expected in the smallest region; done: "
+        "realisations; in brackets the standard error of the last digits, over sprinklings; kept: "
+        "kept over nominal modes, mean over the regions"
+    ]
+    if any(cell.mutual_information is not None for cell in found.cells):
+        notes.append(
+            "support, direct sum: the two union rules; I: mutual information of the nearest pair, "
+            "which need not be positive here; cross: norm of that pair's cross block"
+        )
+    shifts = results.design.plan.placements
+    if len(shifts) > 1 or shifts != ((0.0, 0.0),):
+        classes = (f"{k + 1} t {t:g} x {x:g}" for k, (t, x) in enumerate(shifts))
+        notes.append(
+            "placement classes, all regions shifted together, mean over mirror images: "
+            + "; ".join(classes)
+        )
+    if any(cell.entropy.count == 1 for cell in found.cells):
+        notes.append("(?): one realisation, no error is known")
+    if any(cell.untrusted for cell in found.cells):
+        notes.append(
+            "*: some samples' certificate is not met or a number carries a mark; they are in "
+            "the means, and the CSV tells which"
+        )
+    return notes + [f"left out: {text}" for text in results.design.left_out]
+
+
+# ------------------------------------------------------------------------- fits
+
+
+def _fit_text(results: Results, fit: FitOf) -> str:
+    """A fit with all that a referee would ask."""
+    label = f", {fit.label.replace('_', ' ')}" if fit.label else ""
+    heading = f"fit over {fit.axis.replace('_', ' ')}{label}"
+    if fit.report is None:
+        return "\n".join([heading, *map(wrapped, [fit.note, *_regime(fit.regime)])])
+    lines = [*_line(fit.report, several=len(results.design.plan.placements) > 1)]
+    lines += _checks(fit.report)
+    if fit.reference is not None:
+        lines.append(_against(fit.report.fit, fit.reference))
+    elif fit.axis == "half_width":
+        lines.append("no reference slope: region/patch changes along this axis")
+    lines += _regime(fit.regime)
+    return "\n".join([heading, *map(wrapped, lines)])
+
+
+def _line(report: SlopeReport, *, several: bool) -> list[str]:
+    """The slope, its interval, the constants and how well the line fits."""
+    fit = report.fit
+    constants = ", ".join(
+        f"{f'class {placement + 1} ' if several else ''}{with_error(value, error)}"
+        for placement, value, error in fit.constants
+    )
+    return [
+        f"{MODEL_WORDS['log']}: b = {with_error(fit.slope, fit.slope_error)}, 95 % interval "
+        f"{fit.low:.4g} to {fit.high:.4g}; c = {constants}",
+        f"{_quality(fit)}, {fit.cells} cells, at least {fit.realisations} realisations each; "
+        f"{fit.method}",
+    ]
+
+
+def _quality(fit: LineFit) -> str:
+    if not math.isfinite(fit.p_value):
+        return "chi2 unknown: no more points than parameters"
+    return f"chi2/dof {fit.chi2:.3g}/{fit.dof}, p {fit.p_value:.2g}"
+
+
+def _checks(report: SlopeReport) -> list[str]:
+    """Bootstrap, other laws, smaller windows, and the verdict."""
+    lines = [f"bootstrap over sprinklings: error of b {two_digits(report.bootstrap_error)}"]
+    best = report.models[0].aicc if report.models else math.nan
+    laws = (
+        f"{MODEL_WORDS[fit.model]} {_gap(fit.aicc - best)} (p {fit.p_value:.2g})"
+        for fit in report.models
+    )
+    lines.append(f"laws by AICc above the best: {'; '.join(laws)}")
+    windows = (
+        f"{smallest:.0f}: {with_error(fit.slope, fit.slope_error)}"
+        for smallest, fit in report.by_smallest
+    )
+    lines.append(f"b against the smallest elements fitted: {', '.join(windows)}")
+    verdict = "settled" if report.settled else "NOT settled"
+    lines.append(f"{verdict}: {report.why}" if report.why else verdict)
+    return lines
+
+
+def _gap(x: float) -> str:
+    return f"+{x:.1f}" if math.isfinite(x) else NO_NUMBER
+
+
+def _against(fit: LineFit, reference: float) -> str:
+    sigma = (fit.slope - reference) / fit.slope_error
+    side = "above" if sigma > 0 else "below"
+    return (
+        f"reference slope {reference:.4g}, asymptotic: b is {abs(sigma):.1f} sigma {side} it "
+        f"({100 * (fit.slope / reference - 1):+.1f} %)"
+    )
+
+
+def _regime(regime: Regime) -> list[str]:
+    """Where the fit stands between the limits that a law assumes."""
+    gap = "one region" if math.isnan(regime.gap) else f"smallest gap {regime.gap:.3g}"
+    return [
+        f"regime: {_span(regime.elements, '.0f')} elements per region (many wanted), kept/nominal "
+        f"{_span(regime.kept_ratio, '.2f')} (1 wanted), region/patch {_span(regime.size, '.2g')} "
+        f"(small wanted), {gap}"
+    ]
+
+
+def _span(ends: Sequence[float], form: str) -> str:
+    low, high = (format(x, form) if math.isfinite(x) else NO_NUMBER for x in ends)
+    return low if low == high else f"{low} to {high}"
+
+
+# ---------------------------------------------------------------------- closing
+
+
+def _closing(results: Results, found: Estimates) -> list[str]:
+    """Failures, control variates, prediction, versions, seeds."""
+    lines = [f"failed: {count} x {reason}" for reason, count in found.failures]
+    lines += _controls_text(results)
+    lines += _prediction_text(results)
+    versions = ", ".join(f"{name} {version}" for name, version in results.versions.items())
+    source = results.preset.setup.points
+    lines.append(
+        f"seed {source.seed}, {source.kind} points; each realisation has its own child seed"
+    )
+    lines.append(f"computed with {versions}")
+    return lines
+
+
+def controls(results: Results) -> tuple[Reduction | None, ...]:
+    """Try control variates on the entropy of every cell.
+
+    The controls are the elements of the patch and of each region and the ordering fraction, whose
+    means are known: density times area, and one half.
+
+    Parameters
+    ----------
+    results : Results
+        Open.
+
+    Returns
+    -------
+    tuple of Reduction or None
+        In the order of `Design.cells`; None with too few realisations.
+    """
+    layout = results.design
+    found: dict[int, Reduction | None] = {}
+    for g, own in enumerate(layout.sprinklings):
+        table = results.table(g)
+        patch = np.column_stack([table.elements.astype(float), table.ordering_fraction])
+        for column, i in enumerate(own.cells):
+            areas = [region.area for region in layout.cells[i].config.regions]
+            known = [PATCH_AREA * own.density, 0.5, *(own.density * area for area in areas)]
+            inside = table.region_elements[column]
+            tried = reduction(
+                table.union_support[:, column], np.hstack([patch, inside]), np.array(known)
+            )
+            found[i] = tried if isinstance(tried, Reduction) else None
+    return tuple(found[i] for i in range(len(layout.cells)))
+
+
+def _controls_text(results: Results) -> list[str]:
+    tried = [one for one in controls(results) if one is not None]
+    if not tried:
+        return []
+    ratios = sorted(one.ratio for one in tried)
+    middle = float(np.median(ratios))
+    moved = max(abs(one.shift) for one in tried)
+    verdict = "enough" if middle >= WORTH_IT else "not enough"
+    return [
+        "control variates tried, not used in the numbers above: elements of patch and regions, "
+        f"ordering fraction; they divide the variance of S by {middle:.2f} (median; "
+        f"{ratios[0]:.2f} to {ratios[-1]:.2f}), {verdict} to earn a place, which takes {WORTH_IT}; "
+        f"means would move by at most {moved:.1f} standard errors of that move"
+    ]
+
+
+def prediction(results: Results) -> tuple[float, float]:
+    """Predicted and measured CPU time of the realisations that did not fail.
+
+    Parameters
+    ----------
+    results : Results
+        Open.
+
+    Returns
+    -------
+    tuple of float
+        Seconds; 0 and 0 without a prediction.
+    """
+    pairs = _times(results)
+    return sum(p for _, p, _ in pairs), sum(m for _, _, m in pairs)
+
+
+def _times(results: Results) -> list[tuple[float, float, float]]:
+    """Density, predicted and measured seconds of each sprinkling that has any."""
+    found = []
+    for g, (own, (each, _)) in enumerate(
+        zip(results.design.sprinklings, results.predicted, strict=False)
+    ):
+        seconds = results.table(g).seconds
+        if seconds.size and each > 0:
+            found.append((own.density, each * seconds.size, float(seconds.sum())))
+    return found
+
+
+def _prediction_text(results: Results) -> list[str]:
+    """How far off the predicted times were."""
+    pairs = _times(results)
+    if not pairs:
+        return []
+    predicted, measured = prediction(results)
+    shares = ", ".join(f"{density:g} {_off(m, p)}" for density, p, m in pairs)
+    return [
+        f"predicted {duration(predicted)} of CPU time for these realisations, measured "
+        f"{duration(measured)}: {_off(measured, predicted)}; by density {shares}"
+    ]
+
+
+def _off(measured: float, predicted: float) -> str:
+    return f"{100 * (measured / predicted - 1):+.0f} %"
