@@ -34,8 +34,11 @@ def target_text(target: Target) -> str:
     str
         Like ``b to 2 %`` or ``S at every point to 0.01``.
     """
-    error = f"{100 * target.error:g} %" if target.relative else f"{target.error:g}"
-    return f"{QUANTITY_WORDS[target.quantity]} to {error}"
+    return f"{QUANTITY_WORDS[target.quantity]} to {_wanted_error(target)}"
+
+
+def _wanted_error(target: Target) -> str:
+    return f"{100 * target.error:g} %" if target.relative else f"{target.error:g}"
 
 
 def share(error: float, target: Target) -> str:
@@ -206,7 +209,7 @@ def progress_text(now: Progress, target: Target | None) -> str:
     parts = [f"{thousands(now.done, space=' ')} of {thousands(now.planned, space=' ')} done"]
     parts += [f"{now.failed} failed"] if now.failed else []
     if target is not None:
-        parts.append(f"{target_text(target)}: {share(now.error, target)}")
+        parts.append(f"error {share(now.error, target)}, wanted {_wanted_error(target)}")
     parts.append(duration(now.elapsed))
     if math.isfinite(now.seconds_left):
         parts.append(f"about {duration(now.seconds_left)} left")

@@ -12,7 +12,14 @@ from lozenge_dashboard.curves import aligned, wrapped
 from lozenge_engine.estimates import CellEstimate, Estimates, FitOf, Regime
 from lozenge_engine.geometry import PATCH_AREA
 from lozenge_engine.kernels.gls import LineFit, Reduction, SlopeReport, reduction
-from lozenge_engine.notation import NO_NUMBER, duration, thousands, two_digits, with_error
+from lozenge_engine.notation import (
+    NO_NUMBER,
+    duration,
+    thousands,
+    two_digits,
+    with_error,
+    with_scatter,
+)
 from lozenge_engine.store import Results
 
 __all__ = [
@@ -195,27 +202,33 @@ def _line(report: SlopeReport, *, several: bool) -> list[str]:
     )
     return [
         f"{MODEL_WORDS['log']}: b = {with_error(fit.slope, fit.slope_error)}, 95 % interval "
-        f"{fit.low:.4g} to {fit.high:.4g}; c = {constants}",
+        f"{_end(fit.low, fit)} to {_end(fit.high, fit)}; c = {constants}",
         f"{_quality(fit)}, {fit.cells} cells, at least {fit.realisations} realisations each; "
         f"{fit.method}",
     ]
 
 
+def _end(x: float, fit: LineFit) -> str:
+    """An end of the interval, with one digit more than the slope."""
+    return with_scatter(x, fit.slope_error)
+
+
 def _quality(fit: LineFit) -> str:
     if not math.isfinite(fit.p_value):
-        return "chi2 unknown: no more points than parameters"
+        return "chi2 not known"
     return f"chi2/dof {fit.chi2:.3g}/{fit.dof}, p {fit.p_value:.2g}"
 
 
 def _checks(report: SlopeReport) -> list[str]:
     """Bootstrap, other laws, smaller windows, and the verdict."""
     lines = [f"bootstrap over sprinklings: error of b {two_digits(report.bootstrap_error)}"]
-    best = report.models[0].aicc if report.models else math.nan
+    ranked = [fit for fit in report.models if math.isfinite(fit.aicc)]
     laws = (
-        f"{MODEL_WORDS[fit.model]} {_gap(fit.aicc - best)} (p {fit.p_value:.2g})"
-        for fit in report.models
+        f"{MODEL_WORDS[fit.model]} {fit.aicc - ranked[0].aicc:+.1f} (p {fit.p_value:.2g}, "
+        f"{'a' if fit.model == 'volume' else 'b'} {with_error(fit.slope, fit.slope_error)})"
+        for fit in ranked
     )
-    lines.append(f"laws by AICc above the best: {'; '.join(laws)}")
+    lines.append(f"laws by AICc above the best: {'; '.join(laws) or 'not known'}")
     windows = (
         f"{smallest:.0f}: {with_error(fit.slope, fit.slope_error)}"
         for smallest, fit in report.by_smallest
@@ -224,10 +237,6 @@ def _checks(report: SlopeReport) -> list[str]:
     verdict = "settled" if report.settled else "NOT settled"
     lines.append(f"{verdict}: {report.why}" if report.why else verdict)
     return lines
-
-
-def _gap(x: float) -> str:
-    return f"+{x:.1f}" if math.isfinite(x) else NO_NUMBER
 
 
 def _against(fit: LineFit, reference: float) -> str:

@@ -203,6 +203,8 @@ def run_campaign(
             return Ended(paused=True, trusted=True)
         found = estimates(results)
         put(f"{ending.text}\n\n{report_text(results, found)}")
+        if ending.reason == "budget":
+            _told(f"To go on, with a larger campaign.budget in the preset:\n{resume_line}")
         return Ended(paused=False, trusted=trusted(found))
 
 

@@ -7,6 +7,7 @@ measured once, at first use, in about 0.2 s, and corrected by what `CostModel.le
 from __future__ import annotations
 
 import functools
+import itertools
 import math
 import time
 from typing import NamedTuple
@@ -86,9 +87,21 @@ def _counted(config: Config) -> _Work:
 
 
 def _second_stage(config: Config, r: float) -> float:
-    """Flops of restriction, cut and entropies with r kept modes of the patch."""
-    inside = sum(region.area for region in config.regions) * config.points.density
-    return 8 * inside * r**2 + 300.0 * (len(config.regions) + 1) ** 2 * min(r, inside) ** 3 / 4
+    """Flops of restriction, cut and entropies with r kept positive modes of the patch.
+
+    A region of n elements is a problem of min(2 r, n) dimensions, made by products of n x 2 r
+    numbers; so are pairs, triples and the union, whose modes are attributed by support.  The
+    coefficients are measured (DEVELOPERS.md).
+    """
+    density = config.points.density
+    elements = [region.area * density for region in config.regions]
+    sizes = {k: itertools.combinations(elements, k) for k in {2, 3, len(elements)} - {1}}
+    together = [sum(own) for k, blocks in sizes.items() if k <= len(elements) for own in blocks]
+    flops = 0.0
+    for n in elements:
+        size = min(2 * r, n)
+        flops += 8 * size**3 + 7 * n * r * size
+    return flops + 20 * sum(min(2 * r, n) ** 3 for n in together)
 
 
 class CostModel:

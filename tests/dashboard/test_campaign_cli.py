@@ -15,6 +15,7 @@ import sys
 import time
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -256,7 +257,10 @@ def test_a_budget_ends_the_run_and_says_so(
     plan = replace(PLAN, realisations=100_000, budget=1.0)
     file = tmp_path / "out.results"
     assert cli.main(["run", saved(tmp_path / "p.json", plan), "--results", str(file)]) == cli.OK
-    assert capsys.readouterr().out.startswith("the budget of 1.0 s is spent\n")
+    out, err = capsys.readouterr()
+    assert out.startswith("the budget of 1.0 s is spent\n")
+    assert err.endswith(f"--results {file}\n")
+    assert "with a larger campaign.budget in the preset" in err
 
 
 def test_regions_rules_and_classes_have_rows_of_their_own(
@@ -501,48 +505,55 @@ def test_without_the_extra_the_cluster_is_refused_with_what_installs_it(
 # ------------------------------------------------------------------------ the cluster
 
 
+CLUSTER = """
+import sys
+from distributed import LocalCluster
+if __name__ == "__main__":
+    with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None) as cluster:
+        worker = next(iter(cluster.workers.values()))
+        print(cluster.scheduler_address, worker.process.pid, flush=True)
+        sys.stdin.read()
+"""
+
+
+@contextmanager
+def cluster() -> Iterator[tuple[str, int]]:
+    """Address of a scheduler with two workers of one thread, and the process of one of them."""
+    environment = os.environ | {"PYTHONPATH": os.pathsep.join(PYTHONPATH)}
+    pipe = subprocess.PIPE
+    with subprocess.Popen(
+        [sys.executable, "-c", CLUSTER],
+        env=environment,
+        text=True,
+        stdin=pipe,
+        stdout=pipe,
+        stderr=subprocess.DEVNULL,
+    ) as child:
+        assert child.stdout is not None
+        address, pid = child.stdout.readline().split()
+        yield address, int(pid)
+        child.communicate("", timeout=30)
+
+
 @pytest.mark.slow
-def test_a_cluster_computes_the_same_samples(small: str, finished: Path, tmp_path: Path) -> None:
+def test_a_cluster_one_of_whose_workers_is_killed_computes_the_same_samples(
+    tmp_path: Path,
+) -> None:
     pytest.importorskip("distributed")
-    here = finished
-    there = tmp_path / "there.results"
+    plan = replace(PLAN, realisations=60)
+    preset, there = saved(tmp_path / "p.json", plan), tmp_path / "there.results"
+    here = computed(preset, tmp_path / "here.results")
     with (
-        _cluster() as address,
-        process("run", small, "--results", str(there), "--dask", address) as child,
+        cluster() as (address, pid),
+        process("run", preset, "--results", str(there), "--dask", address) as child,
     ):
+        _wait_for(there)
+        os.kill(pid, signal.SIGKILL)
         out, err = child.communicate(timeout=120)
     assert child.returncode == cli.OK, err
     assert "2 at a time" in err
-    assert out.startswith("all 64 realisations are there\n")
+    assert out.startswith("all 240 realisations are there\n")
     assert _numbers(there) == _numbers(here)
-
-
-class _cluster:  # noqa: N801 (read as a function)
-    """A scheduler with two workers of one thread, in processes of their own."""
-
-    CODE = (
-        "import sys\n"
-        "from distributed import LocalCluster\n"
-        "if __name__ == '__main__':\n"
-        "    with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None) as c:\n"
-        "        print(c.scheduler_address, flush=True)\n"
-        "        sys.stdin.read()\n"
-    )
-
-    def __enter__(self) -> str:
-        self.child = subprocess.Popen(
-            [sys.executable, "-c", self.CODE],
-            env=os.environ | {"PYTHONPATH": os.pathsep.join(PYTHONPATH)},
-            text=True,
-            stdin=subprocess.PIPE,
-            stdout=subprocess.PIPE,
-            stderr=subprocess.DEVNULL,
-        )
-        assert self.child.stdout is not None
-        return self.child.stdout.readline().strip()
-
-    def __exit__(self, *_: object) -> None:
-        self.child.communicate("", timeout=30)
 
 
 def _numbers(file: Path) -> list[tuple[object, ...]]:
@@ -629,13 +640,13 @@ def progress(**changes: Any) -> campaign.Progress:
 def test_progress_tells_done_failed_error_and_time_left() -> None:
     target = Target(quantity="slope", error=0.02, relative=True)
     assert progress_text(progress(), target) == (
-        "1 200 of 4 000 done, b to 2 %: 3.1 %, 60 s, about 2 min 20 s left"
+        "1 200 of 4 000 done, error 3.1 %, wanted 2 %, 60 s, about 2 min 20 s left"
     )
     nothing = progress(failed=3, error=float("inf"), seconds_left=float("nan"))
     assert progress_text(nothing, target) == (
-        "1 200 of 4 000 done, 3 failed, b to 2 %: not known yet, 60 s"
+        "1 200 of 4 000 done, 3 failed, error not known yet, wanted 2 %, 60 s"
     )
-    assert "b to" not in progress_text(progress(), None)
+    assert "wanted" not in progress_text(progress(), None)
 
 
 def test_without_a_terminal_a_line_comes_every_half_minute(

@@ -337,11 +337,13 @@ def test_a_curved_law_is_noticed() -> None:
 # ---------------------------------------------------------------- bootstrap and allocation
 
 
-@pytest.mark.parametrize("kind", ["ladder", "sweep", "few", "large"])
+@pytest.mark.parametrize("kind", ["ladder", "uneven", "sweep", "few", "large"])
 def test_drawing_realisations_again_gives_the_same_error(kind: str) -> None:
     rng = np.random.default_rng(31)
     groups = {
         "ladder": lambda: ladder(rng, 100),
+        # Without weights the error would be eight times as large.
+        "uneven": lambda: ladder(rng, 100, scatter=SCATTER * np.array([1, 1, 1, 1, 1, 20])),
         "sweep": lambda: [sweep(rng, 200)],
         "few": lambda: [sweep(rng, 25)],
         "large": lambda: [sweep(rng, 5003)],

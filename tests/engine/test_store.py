@@ -439,7 +439,8 @@ def killed(path: Path, *, after: int, pause: float) -> set[tuple[int, int]]:
 def check_prefix(results: Results, said: set[tuple[int, int]]) -> None:
     """Whole realisations in the order of recording, at most one more than was said."""
     count = len(results.done())
-    assert len(said) <= count <= len(said) + 1
+    assert said <= results.done()
+    assert count <= len(said) + 1
     assert results.done() == {(k % 2, k // 2) for k in range(count)}
     for sprinkling in range(2):
         table = results.table(sprinkling)

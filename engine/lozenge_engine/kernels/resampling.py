@@ -18,7 +18,7 @@ FloatArray = NDArray[np.float64]
 
 BLOCKS = 1000
 """Most blocks of rows that a bootstrap draws; more rows than that are drawn in blocks."""
-LARGEST = 20_000_000
+LARGEST = 4_000_000
 """Most numbers in one array of a bootstrap, roughly."""
 
 
@@ -67,8 +67,8 @@ def bootstrap(
     -----
     Every draw has its own means and covariance, hence weights.  More than 1000 rows are drawn in
     1000 blocks of consecutive ones, which differ as little as the rows depend on each other.
-    Draws with too few different rows for a covariance are drawn again; measured, the error is a
-    fifth too large at R = 2 P + 4 and within a twentieth from R = 6 P on, P = 10; it also lacks a
+    Draws with too few different rows for a covariance are drawn again.  Measured, the error is a
+    tenth to a half too large below R = 3 P and within a twentieth from R = 6 P on; it also lacks a
     factor sqrt((R - 1)/R).  Cost: R P**2 + resamples min(R, 1000) P**2 flops.
     """
     data = prepare(groups, model)
