@@ -303,7 +303,7 @@ def test_progress_is_shown_on_a_terminal_for_long_work_only(
     monkeypatch.setattr(run, "compute", reporting)
     monkeypatch.setattr(sys.stderr, "isatty", lambda: True)
     for seconds in (1.0, 60.0):
-        monkeypatch.setattr(run, "predict", lambda _config, s=seconds: Prediction(s, 1e6))
+        monkeypatch.setattr(run, "predict", lambda _config, s=seconds: Prediction(s, 1e6, 0.1))
         assert cli.main(["run", str(small)]) == cli.OK
     assert [report is None for report in reports] == [True, False]
     monkeypatch.setattr(sys.stderr, "isatty", lambda: False)
