@@ -30,6 +30,10 @@ GROWTH = 1.5
 LEAST = 1.05
 """A round adds at least this, so that the end is reached."""
 
+LEAST_SHARE = 0.05
+"""Every sprinkling has at least this share of the time: the best place for a slope's error is at
+the ends of the ladder, but it takes the points between them to see whether the line fits."""
+
 
 class Round(NamedTuple):
     """How far each sprinkling is to come, and what the rounds before it reached.
@@ -146,7 +150,12 @@ def _for_slope(
         more = [g for g, n in enumerate(counts) if n < layout.plan.realisations]
         if not more:
             break
-        g = max(more, key=lambda g: variances[g] / (counts[g] * (counts[g] + 1) * costs[g]))
+        spent = [c * n for c, n in zip(costs, counts, strict=True)]
+        behind = [g for g in more if spent[g] < LEAST_SHARE * sum(spent)]
+        if behind:
+            g = min(behind, key=lambda g: spent[g])
+        else:
+            g = max(more, key=lambda g: variances[g] / (counts[g] * (counts[g] + 1) * costs[g]))
         counts[g] += 1
         left -= costs[g]
     return tuple(counts)

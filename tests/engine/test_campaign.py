@@ -237,6 +237,20 @@ def test_a_round_goes_where_it_lowers_the_slopes_error_most_per_second() -> None
     assert np.dot(gained, costs) <= 0.5 * PILOT * sum(costs) + max(costs)
 
 
+def test_every_sprinkling_has_its_share_of_the_time() -> None:
+    axis = Axis(name="density", values=(150.0, 200.0, 250.0, 300.0, 400.0))
+    target = Target(quantity="slope", error=1e-4)
+    wanted = preset(axes=(axis,), target=target, realisations=10_000)
+    layout = design(wanted.setup, wanted.campaign or CampaignPlan(axes=()))
+    goals = first_round(layout).goals
+    for _ in range(8):
+        tables = [synthetic(layout, g, goals[g], seed=g) for g in range(5)]
+        goals = advance(layout, goals, tables).goals
+    spent = np.array([nominal_seconds(layout, g) * n for g, n in enumerate(goals)])
+    assert spent.min() >= 0.04 * spent.sum()
+    assert goals[0] > 4 * goals[2]
+
+
 def synthetic(layout: Any, sprinkling: int, count: int, *, seed: int) -> Any:
     """A table of made-up samples with the scatter of real ones."""
     from lozenge_engine.store import Table
