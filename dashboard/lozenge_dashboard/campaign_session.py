@@ -69,7 +69,7 @@ class CampaignSession:
         self.shown = asked.file or next(iter(campaigns.running()), "")
         self.watch: Watch | None = None
         self.changes = Changes()
-        self.forecast, self._forecast_of = dict(NO_FORECAST), cast(object, None)
+        self.forecast = dict(NO_FORECAST)
         self.acting = ""
         self._answered = 0
         self._reading = False
@@ -175,7 +175,8 @@ class CampaignSession:
         elif name == "pause" and self.shown:
             self.campaigns.pause(self.shown)
         elif name == "resume" and self.shown:
-            self._go_on(None)
+            typed = self.watch is not None and self.changes != Changes()
+            self._go_on(self.changes.applied(self.watch.plan) if typed and self.watch else None)
         elif name == "more" and self.watch is not None:
             self._go_on(self.changes.applied(self.watch.plan))
         elif name == "adopt" and self.watch is not None:
@@ -269,6 +270,11 @@ class CampaignSession:
             return "something above is refused"
         return "nothing can be computed" if self.forecast.get("error") else ""
 
+    def _shared(self) -> str:
+        """That another campaign of this server would run beside the new one."""
+        names = ", ".join(self.campaigns.running())
+        return f"{names} runs too: they will share the processors." if names else ""
+
     # ------------------------------------------------------------ the records
 
     def _look(self) -> None:
@@ -359,7 +365,7 @@ class CampaignSession:
             errors={**self.errors, **self.errors_now()},
             page=page,
             opened=opened,
-            forecast={"older": False, **self.forecast},
+            forecast={"older": False, **self.forecast, "shared": self._shared()},
             start=self._hindrance(),
         )
         return {**state, "answered": self._answered}

@@ -107,9 +107,7 @@ def line_html(watch: Watch | None, status: Status) -> str:
         parts.append(_reading("time left, about", duration(left)))
     kind = "status busy" if status.running else "status"
     said = html.escape(f"{watch.name}: {state_words(watch, status)}")
-    return (
-        f"<dl class='readings'>{''.join(parts)}<div class='{kind}' role='status'>{said}</div></dl>"
-    )
+    return f"<dl class='readings'>{''.join(parts)}<div class='{kind}'>{said}</div></dl>"
 
 
 # ---------------------------------------------------------------- paragraphs

@@ -83,7 +83,10 @@ def test_a_hundred_thousand_samples(tmp_path, regions, densities, placements):
             tables = [results.table(s) for s in range(len(layout.sprinklings))]
         return sum(table.trusted.size for table in tables)
 
+    before = time.process_time()
     count, reading = timed(read)
+    reading = min(reading, *(timed(read)[1] for _ in range(2)))
+    work = (time.process_time() - before) / 3
     with inspect(path) as results:
         _, counting = timed(results.counts)
         _, listing = timed(results.done)
@@ -92,7 +95,8 @@ def test_a_hundred_thousand_samples(tmp_path, regions, densities, placements):
     size = path.stat().st_size
     print(
         f"\n{count} samples of {regions} regions, {densities} sprinklings of {placements} cells: "
-        f"{size / 1e6:.1f} MB, opened and all tables read in {reading:.2f} s, counts "
+        f"{size / 1e6:.1f} MB, opened and all tables read in {reading:.2f} s "
+        f"({work:.2f} s of CPU time), counts "
         f"{1e3 * counting:.1f} ms, done {1e3 * listing:.0f} ms, checked and resumed in "
         f"{opening:.2f} s; {1e6 * writing / count:.0f} us a sample to write without waiting"
     )

@@ -79,8 +79,11 @@ function updateHead(parts, page) {
   parts.theme.textContent = page.theme === "dark" ? "Light" : "Dark";
   parts.theme.title = `Changes to the ${page.theme === "dark" ? "light" : "dark"} colours.`;
   Object.assign(document.documentElement.dataset, { theme: page.theme, focus: page.focus || "none" });
-  const wanted = page.file ? `?file=${encodeURIComponent(page.file)}` : null;
-  if (wanted && location.search !== wanted) history.replaceState(null, "", location.pathname + wanted);
+  const address = new URL(location.href);
+  if (page.file && address.searchParams.get("file") !== page.file) {
+    address.searchParams.set("file", page.file);
+    history.replaceState(null, "", address);
+  }
 }
 
 const OFF = {
@@ -139,7 +142,7 @@ function updateOpened(parts, state) {
 
 function prediction(act) {
   const parts = {
-    text: make("p", { role: "status" }), note: make("p", { class: "caution" }), error: make("p", { class: "refusal", role: "alert" }),
+    text: make("p", { role: "status" }), note: make("p", { class: "caution" }), shared: make("p", { class: "reason" }), error: make("p", { class: "refusal", role: "alert" }),
     rows: make("ul"), each: make("details", {}, make("summary", {}, "each density")),
     left: make("ul"), out: make("details", { class: "caution" }), outTitle: make("summary"),
     start: button("Start", "Makes the results file and runs the campaign on this server; closing the page changes nothing.", () => act("start"), "primary"),
@@ -148,7 +151,7 @@ function prediction(act) {
   parts.each.append(parts.rows);
   parts.out.append(parts.outTitle, parts.left);
   parts.node = make("section", { class: "group", "aria-label": "Prediction" }, make("div", { class: "head" }, make("h2", {}, "Predicted")),
-    parts.text, parts.note, parts.error, parts.each, parts.out, make("div", { class: "buttons" }, parts.start), parts.why);
+    parts.text, parts.note, parts.shared, parts.error, parts.each, parts.out, make("div", { class: "buttons" }, parts.start), parts.why);
   return parts;
 }
 
@@ -157,8 +160,9 @@ function updatePrediction(parts, state, start) {
   parts.text.textContent = state.text;
   parts.text.classList.toggle("older", state.older);
   parts.note.textContent = state.note;
+  parts.shared.textContent = state.shared;
   parts.error.textContent = state.error;
-  for (const name of ["note", "error", "text"]) parts[name].hidden = !parts[name].textContent;
+  for (const name of ["note", "error", "text", "shared"]) parts[name].hidden = !parts[name].textContent;
   list(parts.rows, state.rows);
   parts.each.hidden = !state.rows.length;
   list(parts.left, state.left_out);

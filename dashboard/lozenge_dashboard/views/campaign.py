@@ -269,9 +269,8 @@ def read(watch: Watch, choices: CampaignChoices, look: Look) -> Quantity:
         marker = np.array(
             [MARKERS[watch.design.cells[i].placement % len(MARKERS)] for i in curve.cells], object
         )
-        marks.append(
-            (x[some], y[some], colour, marker[some], 8.0, np.array(curve.used, float)[some])
-        )
+        fill = np.array(curve.used, float) if fits else np.ones(x.size)
+        marks.append((x[some], y[some], colour, marker[some], 8.0, fill[some]))
     if fits:
         strokes = _fit_lines(watch, found, look) + strokes
     if choices.quantity == "mutual":
