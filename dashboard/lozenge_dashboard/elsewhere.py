@@ -14,8 +14,8 @@ from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
 from lozenge_dashboard.jobs import ONE_THREAD
-from lozenge_engine.workers import one_thread, watch_parent
 from lozenge_engine.errors import InputError
+from lozenge_engine.workers import one_thread, watch_parent
 
 if TYPE_CHECKING:
     from lozenge_engine.config import Config

@@ -207,7 +207,7 @@ class _Live:
             background_fill_color=look.panel,
             border_fill_color=look.panel,
             outline_line_color=None,
-            border_line_color=None,
+            border_line_color=look.panel,  # without one Bokeh draws it in some other colour
             min_border_right=12,
         )
         for axis in (*plot.below, *plot.left):
