@@ -8,7 +8,7 @@ import math
 from collections.abc import Iterator
 from typing import Any
 
-from lozenge_dashboard.campaign_report import controls, prediction, trusted
+from lozenge_dashboard.campaign_checks import controls, prediction, trusted
 from lozenge_engine.agreement import plain
 from lozenge_engine.design import child_seed
 from lozenge_engine.estimates import CellEstimate, Estimates
@@ -35,8 +35,9 @@ def results_document(results: Results, found: Estimates) -> dict[str, Any]:
     Returns
     -------
     dict
-        Keys ``points``, ``fits``, ``sprinklings``, ``left_out``, ``failures``, ``history`` (CPU
-        seconds, error of the target), ``prediction``, ``trusted``, ``versions`` and ``preset``.
+        Keys ``points``, ``fits``, ``sprinklings``, ``left_out``, ``failures``, ``error`` of the
+        target, ``history`` (CPU seconds, that error), ``prediction``, ``trusted``, ``versions`` and
+        ``preset``.
     """
     predicted, measured = prediction(results)
     tried = controls(results)
@@ -54,12 +55,13 @@ def results_document(results: Results, found: Estimates) -> dict[str, Any]:
         ],
         "left_out": list(results.design.left_out),
         "failures": [{"reason": reason, "count": count} for reason, count in found.failures],
+        "error": _plain(found.error),
         "history": _plain(found.history),
         "cpu_seconds": found.cpu_seconds,
         "elapsed": results.elapsed,
         "prediction": {"predicted": predicted, "measured": measured} if predicted else None,
         "trusted": trusted(found),
-        "versions": dict(results.versions),
+        "versions": [{"realisations": count, **made} for made, count in results.computed_with()],
         "preset": json.loads(dumps(results.preset)),
     }
 

@@ -3,16 +3,26 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Collection
 
 from lozenge_dashboard.curves import aligned, wrapped
 from lozenge_engine.campaign import Progress
+from lozenge_engine.config import Setup
 from lozenge_engine.design import Design
 from lozenge_engine.forecast import Forecast
 from lozenge_engine.notation import duration, thousands, two_digits
 from lozenge_engine.plan import CampaignPlan, Target
 from lozenge_engine.presets import Preset
 
-__all__ = ["fits_it", "plan_text", "progress_text", "share", "target_text", "value_text"]
+__all__ = [
+    "fits_it",
+    "plan_text",
+    "progress_text",
+    "setting_text",
+    "share",
+    "target_text",
+    "value_text",
+]
 
 QUANTITY_WORDS = {
     "slope": "b",
@@ -114,8 +124,9 @@ def plan_text(preset: Preset, layout: Design, foreseen: Forecast) -> str:
     """
     plan = layout.plan
     mark = " (invented scenario)" if preset.invented else ""
+    names = {axis.name for axis in plan.axes}
     blocks = [
-        f"{preset.title}{mark}\n{_wanted(plan)}",
+        f"{preset.title}{mark}\n{wrapped(setting_text(layout.setup, names))}\n{_wanted(plan)}",
         aligned(_point_rows(layout)),
         aligned(_sprinkling_rows(foreseen)),
         "\n".join(map(wrapped, _totals(foreseen, plan))),
@@ -214,3 +225,52 @@ def progress_text(now: Progress, target: Target | None) -> str:
     if math.isfinite(now.seconds_left):
         parts.append(f"about {duration(now.seconds_left)} left")
     return ", ".join(parts)
+
+
+def setting_text(setup: Setup, varied: Collection[str]) -> str:
+    """Say what all points of a campaign have in common.
+
+    Parameters
+    ----------
+    setup : Setup
+        What the axes vary.
+    varied : collection of str
+        Names of the axes.
+
+    Returns
+    -------
+    str
+        Points, regions, rules, mass and order; what is varied is left out.
+    """
+    parts = [f"{setup.points.kind} points, seed {setup.points.seed}"]
+    if "density" not in varied:
+        parts.append(f"density {setup.points.density:g}")
+    if setup.region_list is not None:
+        parts.append(f"a list of {len(setup.region_list)} regions")
+    else:
+        row = {
+            "region_count": f"{setup.region_count} in a row",
+            "half_width": f"half-width {setup.half_width:g}",
+            "separation": f"separation {setup.separation:g}",
+        }
+        single = setup.region_count < 2 and "region_count" not in varied
+        parts += [
+            text
+            for name, text in row.items()
+            if name not in varied and not (single and name == "separation")
+        ]
+    parts.append(f"mass {setup.mass:g}" if "mass" not in varied else "")
+    parts.append(_rules_text(setup, varied))
+    if "order" not in varied:
+        parts.append("von Neumann entropy" if setup.order == 1 else f"Renyi, q = {setup.order:g}")
+    return ", ".join(filter(None, parts))
+
+
+def _rules_text(setup: Setup, varied: Collection[str]) -> str:
+    """The rules of both stages."""
+    if "truncation_mode" in varied:
+        return "" if "alpha" in varied else f"alpha {setup.alpha:g}"
+    mode = setup.truncation_mode.replace("_", " ")
+    if setup.truncation_mode == "custom":
+        mode = " then ".join(rule.kind.replace("_", " ") for rule in setup.rules())
+    return f"rules {mode}" + ("" if "alpha" in varied else f" (alpha {setup.alpha:g})")

@@ -7,11 +7,17 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from lozenge_dashboard.campaign_plan import fits_it, share, target_text, value_text
+from lozenge_dashboard.campaign_checks import controls, prediction, times
+from lozenge_dashboard.campaign_plan import (
+    fits_it,
+    setting_text,
+    share,
+    target_text,
+    value_text,
+)
 from lozenge_dashboard.curves import aligned, wrapped
 from lozenge_engine.estimates import CellEstimate, Estimates, FitOf, Regime
-from lozenge_engine.geometry import PATCH_AREA
-from lozenge_engine.kernels.gls import LineFit, Reduction, SlopeReport, reduction
+from lozenge_engine.kernels.gls import LineFit, SlopeReport
 from lozenge_engine.notation import (
     NO_NUMBER,
     duration,
@@ -23,10 +29,7 @@ from lozenge_engine.notation import (
 from lozenge_engine.store import Results
 
 __all__ = [
-    "controls",
-    "prediction",
     "report_text",
-    "trusted",
 ]
 
 MODEL_WORDS = {
@@ -37,22 +40,6 @@ MODEL_WORDS = {
 """The laws that a fit compares; n is the expected number of elements of the smallest region."""
 WORTH_IT = 1.5
 """Ratio of variances from which control variates would earn a place in the means."""
-
-
-def trusted(found: Estimates) -> bool:
-    """Whether nothing failed and no sample carries a mark.
-
-    Parameters
-    ----------
-    found : Estimates
-        What the samples say.
-
-    Returns
-    -------
-    bool
-        False calls for status 3.
-    """
-    return found.failed == 0 and not any(cell.untrusted for cell in found.cells)
 
 
 def report_text(results: Results, found: Estimates) -> str:
@@ -90,9 +77,10 @@ def _heading(results: Results, found: Estimates) -> str:
     target = layout.plan.target
     wanted = []
     if target is not None:
-        reached = found.history[-1][1] if found.history else math.nan
-        wanted.append(f"wanted: {target_text(target)}; reached: {share(reached, target)}")
-    return "\n".join([f"{preset.title}{mark}", wrapped(preset.sentence), counts, *wanted])
+        reached = share(found.error, target) if math.isfinite(found.error) else "not known"
+        wanted.append(f"wanted: {target_text(target)}; reached: {reached}")
+    about = wrapped(setting_text(layout.setup, {axis.name for axis in layout.plan.axes}))
+    return "\n".join([f"{preset.title}{mark}", wrapped(preset.sentence), about, counts, *wanted])
 
 
 # ----------------------------------------------------------------------- points
@@ -139,7 +127,8 @@ def _decimals(x: float) -> str:
 
 def _marks(results: Results, number: CellEstimate) -> str:
     """What is to be known of a row besides its numbers."""
-    marks = [f"{number.untrusted} untrusted"] if number.untrusted else []
+    marks = [f"{number.missing} without a number"] if number.missing else []
+    marks += [f"{number.untrusted} untrusted"] if number.untrusted else []
     if not fits_it(results.design.cells[number.cell].elements, results.design.plan):
         marks.append("not fitted")
     return ", ".join(marks)
@@ -171,6 +160,21 @@ def _legend(results: Results, found: Estimates) -> list[str]:
             "*: some samples' certificate is not met or a number carries a mark; they are in "
             "the means, and the CSV tells which"
         )
+    if any(cell.missing for cell in found.cells):
+        notes.append(
+            "without a number: sprinklings on which that point could not be computed; its means "
+            "and fits are of the others alone, which are a selected sample"
+        )
+    if found.failed:
+        notes.append(
+            f"{found.failed} of {found.done} realisations failed: where failing has to do with the "
+            "points, all means and fits are of a selected sample"
+        )
+    if results.design.setup.order != 1 or any(a.name == "order" for a in results.design.plan.axes):
+        notes.append(
+            "S of order q is the Renyi entropy; I is then the difference of Renyi entropies, which "
+            "is no mutual information"
+        )
     return notes + [f"left out: {text}" for text in results.design.left_out]
 
 
@@ -187,8 +191,8 @@ def _fit_text(results: Results, fit: FitOf) -> str:
     lines += _checks(fit.report)
     if fit.reference is not None:
         lines.append(_against(fit.report.fit, fit.reference))
-    elif fit.axis == "half_width":
-        lines.append("no reference slope: region/patch changes along this axis")
+    else:
+        lines.append(f"no reference slope: {fit.no_reference}")
     lines += _regime(fit.regime)
     return "\n".join([heading, *map(wrapped, lines)])
 
@@ -205,6 +209,7 @@ def _line(report: SlopeReport, *, several: bool) -> list[str]:
         f"{_end(fit.low, fit)} to {_end(fit.high, fit)}; c = {constants}",
         f"{_quality(fit)}, {fit.cells} cells, at least {fit.realisations} realisations each; "
         f"{fit.method}",
+        *([f"{fit.left_out} realisations without a number left out"] if fit.left_out else []),
     ]
 
 
@@ -250,7 +255,9 @@ def _against(fit: LineFit, reference: float) -> str:
 
 def _regime(regime: Regime) -> list[str]:
     """Where the fit stands between the limits that a law assumes."""
-    gap = "one region" if math.isnan(regime.gap) else f"smallest gap {regime.gap:.3g}"
+    gap = "one region"
+    if not math.isnan(regime.gap):
+        gap = f"smallest gap {regime.gap:.3g} = {regime.gap_lengths:.2g} a (many wanted)"
     return [
         f"regime: {_span(regime.elements, '.0f')} elements per region (many wanted), kept/nominal "
         f"{_span(regime.kept_ratio, '.2f')} (1 wanted), region/patch {_span(regime.size, '.2g')} "
@@ -271,45 +278,16 @@ def _closing(results: Results, found: Estimates) -> list[str]:
     lines = [f"failed: {count} x {reason}" for reason, count in found.failures]
     lines += _controls_text(results)
     lines += _prediction_text(results)
-    versions = ", ".join(f"{name} {version}" for name, version in results.versions.items())
+    made = results.computed_with() or ((results.versions, 0),)
     source = results.preset.setup.points
     lines.append(
         f"seed {source.seed}, {source.kind} points; each realisation has its own child seed"
     )
-    lines.append(f"computed with {versions}")
+    for versions, count in made:
+        text = ", ".join(f"{name} {version}" for name, version in versions.items())
+        several = f" ({count} realisations)" if len(made) > 1 else ""
+        lines.append(f"computed with {text}{several}")
     return lines
-
-
-def controls(results: Results) -> tuple[Reduction | None, ...]:
-    """Try control variates on the entropy of every cell.
-
-    The controls are the elements of the patch and of each region and the ordering fraction, whose
-    means are known: density times area, and one half.
-
-    Parameters
-    ----------
-    results : Results
-        Open.
-
-    Returns
-    -------
-    tuple of Reduction or None
-        In the order of `Design.cells`; None with too few realisations.
-    """
-    layout = results.design
-    found: dict[int, Reduction | None] = {}
-    for g, own in enumerate(layout.sprinklings):
-        table = results.table(g)
-        patch = np.column_stack([table.elements.astype(float), table.ordering_fraction])
-        for column, i in enumerate(own.cells):
-            areas = [region.area for region in layout.cells[i].config.regions]
-            known = [PATCH_AREA * own.density, 0.5, *(own.density * area for area in areas)]
-            inside = table.region_elements[column]
-            tried = reduction(
-                table.union_support[:, column], np.hstack([patch, inside]), np.array(known)
-            )
-            found[i] = tried if isinstance(tried, Reduction) else None
-    return tuple(found[i] for i in range(len(layout.cells)))
 
 
 def _controls_text(results: Results) -> list[str]:
@@ -328,38 +306,9 @@ def _controls_text(results: Results) -> list[str]:
     ]
 
 
-def prediction(results: Results) -> tuple[float, float]:
-    """Predicted and measured CPU time of the realisations that did not fail.
-
-    Parameters
-    ----------
-    results : Results
-        Open.
-
-    Returns
-    -------
-    tuple of float
-        Seconds; 0 and 0 without a prediction.
-    """
-    pairs = _times(results)
-    return sum(p for _, p, _ in pairs), sum(m for _, _, m in pairs)
-
-
-def _times(results: Results) -> list[tuple[float, float, float]]:
-    """Density, predicted and measured seconds of each sprinkling that has any."""
-    found = []
-    for g, (own, (each, _)) in enumerate(
-        zip(results.design.sprinklings, results.predicted, strict=False)
-    ):
-        seconds = results.table(g).seconds
-        if seconds.size and each > 0:
-            found.append((own.density, each * seconds.size, float(seconds.sum())))
-    return found
-
-
 def _prediction_text(results: Results) -> list[str]:
     """How far off the predicted times were."""
-    pairs = _times(results)
+    pairs = times(results)
     if not pairs:
         return []
     predicted, measured = prediction(results)

@@ -15,9 +15,10 @@ from pathlib import Path
 from types import FrameType
 from typing import Any, NamedTuple
 
+from lozenge_dashboard.campaign_checks import trusted
 from lozenge_dashboard.campaign_files import results_document, samples_csv
 from lozenge_dashboard.campaign_plan import plan_text, progress_text, target_text
-from lozenge_dashboard.campaign_report import report_text, trusted
+from lozenge_dashboard.campaign_report import report_text
 from lozenge_dashboard.run import STANDARD_OUTPUT, put
 from lozenge_engine import campaign, store
 from lozenge_engine.design import design
@@ -39,6 +40,7 @@ CONNECT = 10.0
 """Seconds to wait for a Dask scheduler."""
 
 Report = Callable[[campaign.Progress], None]
+Trouble = Callable[[], str]
 
 
 class Ended(NamedTuple):
@@ -190,13 +192,18 @@ def run_campaign(
     stop = threading.Event()
     with (
         _pausing(stop),
-        _executor(workers, dask) as (executor, capacity),
+        _executor(workers, dask) as (executor, capacity, trouble),
         _opened(path, preset, capacity) as results,
     ):
         _told(_opening(results, capacity))
         with _progress(results.design.plan) as report:
             ending = campaign.run(
-                results, executor=executor, capacity=capacity, report=report, stop=stop
+                results,
+                executor=executor,
+                capacity=capacity,
+                report=report,
+                stop=stop,
+                trouble=trouble,
             )
         if ending.reason == "paused":
             _told(f"{ending.text}; nothing is lost. To go on:\n{resume_line}")
@@ -256,8 +263,8 @@ def _pausing(stop: threading.Event) -> Iterator[None]:
 
 
 @contextmanager
-def _executor(workers: int | None, dask: str | None) -> Iterator[tuple[Executor, int]]:
-    """What computes, and how many realisations at a time."""
+def _executor(workers: int | None, dask: str | None) -> Iterator[tuple[Executor, int, Trouble]]:
+    """What computes, how many realisations at a time, and what is wrong with it."""
     if dask is not None:
         with _cluster(dask) as connected:
             yield connected
@@ -265,13 +272,13 @@ def _executor(workers: int | None, dask: str | None) -> Iterator[tuple[Executor,
     count = _count(workers)
     pool = Processes(count)
     try:
-        yield pool, count
+        yield pool, count, lambda: ""
     finally:
         pool.shutdown(wait=True, cancel_futures=True)
 
 
 @contextmanager
-def _cluster(address: str) -> Iterator[tuple[Executor, int]]:
+def _cluster(address: str) -> Iterator[tuple[Executor, int, Trouble]]:
     """The workers of a Dask scheduler, as an executor."""
     try:
         from distributed import Client
@@ -292,7 +299,11 @@ def _cluster(address: str) -> Iterator[tuple[Executor, int]]:
             do="start one, or check the address",
         ) from error
     try:
-        yield client.get_executor(retries=0), _cluster_size(client, address)
+        yield (
+            client.get_executor(retries=0),
+            _cluster_size(client, address),
+            lambda: "" if client.status in ("running", "connecting") else "its scheduler is gone",
+        )
     finally:
         client.close()
 

@@ -52,8 +52,8 @@ def _wanted(watch: Watch) -> list[str]:
     target = watch.plan.target
     if target is None:
         return []
-    history = watch.estimates.history
-    now = _percent(history[-1][1], relative=target.relative) if history else NO_NUMBER
+    error = watch.estimates.error
+    now = _percent(error, relative=target.relative) if math.isfinite(error) else NO_NUMBER
     goal = _percent(target.error, relative=target.relative)
     return [_reading(f"error of {SYMBOLS[target.quantity]}", now, f"wanted {goal}")]
 
@@ -123,13 +123,15 @@ def _fit_lines(fit: FitOf) -> list[str]:
         where += ", kept/nominal {:.2f} to {:.2f}".format(*fit.regime.kept_ratio)
     where += ", largest half-width {:.3g} to {:.3g}".format(*fit.regime.size)
     if math.isfinite(fit.regime.gap):
-        where += f", smallest gap {fit.regime.gap:.3g}"
+        where += f", smallest gap {fit.regime.gap:.3g} or {fit.regime.gap_lengths:.2g} a"
     lines.append(where + " (patch half-widths).")
     if fit.reference is not None:
         lines.append(
             f"Reference slope {fit.reference:.3f}: asymptotic, for regions small in the patch, "
             "away from its edge and from each other, and full of elements."
         )
+    else:
+        lines.append(f"No reference slope: {fit.no_reference}.")
     return lines
 
 
@@ -147,6 +149,12 @@ def _alone(watch: Watch) -> list[str]:
     if marked:
         said.append(
             f"{thousands(marked)} samples carry a mark (certificate or rank) and are in the means."
+        )
+    missing = sum(cell.missing for cell in watch.estimates.cells)
+    if missing:
+        said.append(
+            f"{thousands(missing)} samples have no number: those points could not be computed on "
+            "their sprinklings, and what is left is a selected sample."
         )
     return said
 
@@ -246,7 +254,7 @@ def rows(watch: Watch) -> list[list[str]]:
         if most > 1:
             row += _pair_columns(found, most)
         row.append(f"{found.kept_ratio:.3f}" if np.isfinite(found.kept_ratio) else NO_NUMBER)
-        row.append(str(found.untrusted))
+        row.append(str(found.untrusted + found.missing))
         if watch.estimates.fits:
             row.append("yes" if found.cell in used else "left out")
         table.append(row)

@@ -7,13 +7,22 @@ import threading
 import time
 from collections import deque
 from collections.abc import Callable, Sequence
-from concurrent.futures import FIRST_COMPLETED, Executor, Future, wait
+from concurrent.futures import (
+    FIRST_COMPLETED,
+    BrokenExecutor,
+    CancelledError,
+    Executor,
+    Future,
+    wait,
+)
 from typing import Literal, NamedTuple
 
 from lozenge_engine.design import Design, child_seed
+from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.notation import duration
 from lozenge_engine.realisation import Record, realise
 from lozenge_engine.schedule import Round, advance, first_round, nominal_seconds
+from lozenge_engine.series import check_target
 from lozenge_engine.store import Results
 
 __all__ = ["Ending", "Progress", "attempt", "run"]
@@ -106,6 +115,7 @@ def run(
     capacity: int,
     report: Callable[[Progress], None] | None = None,
     stop: threading.Event | None = None,
+    trouble: Callable[[], str] | None = None,
 ) -> Ending:
     """Run a campaign until its target, its budget or its last realisation, or until told to stop.
 
@@ -121,6 +131,8 @@ def run(
         Called with a `Progress` after every realisation and about four times a second.
     stop : Event or None
         Set to pause: what is in the middle is given up, and computed again when resumed.
+    trouble : callable or None
+        Asked about four times a second; text ends the run, as a cluster that is gone does.
 
     Returns
     -------
@@ -131,9 +143,28 @@ def run(
     Raises
     ------
     InputError
-        If the results file cannot be written; what was recorded stays.
+        If the results file cannot be written, nothing of the target can ever be known, or the
+        executor does not compute; what was recorded stays.
     """
-    return _Run(results, executor, capacity, report, stop or threading.Event()).loop()
+    check_target(results.design)
+    stop = stop or threading.Event()
+    own = _Run(results, executor, capacity, report=report, stop=stop, trouble=trouble)
+    return own.loop()
+
+
+def _is_death(error: BaseException) -> bool:
+    """Whether an exception of Dask says that workers died; its class is not imported for that."""
+    return type(error).__name__ == "KilledWorker"
+
+
+def _no_computing(text: str) -> InputError:
+    """What an executor that raises says: a realisation never does, see `attempt`."""
+    return refuse(
+        "workers",
+        given=f"an executor that does not compute ({text})",
+        allowed="workers that can load this program",
+        do="see to them and resume: nothing is lost",
+    )
 
 
 class _Run:
@@ -144,8 +175,10 @@ class _Run:
         results: Results,
         executor: Executor,
         capacity: int,
+        *,
         report: Callable[[Progress], None] | None,
         stop: threading.Event,
+        trouble: Callable[[], str] | None,
     ) -> None:
         self.results = results
         self.layout = results.design
@@ -153,6 +186,7 @@ class _Run:
         self.capacity = capacity
         self.report = report
         self.stop = stop
+        self.trouble = trouble or (lambda: "")
         self.begun = time.monotonic()
         self.before = results.elapsed
         self.done = results.done()
@@ -170,6 +204,8 @@ class _Run:
     def loop(self) -> Ending:
         self._plan()
         while not self.stop.is_set():
+            if trouble := self.trouble():
+                raise _no_computing(trouble)
             if self.round.ended:
                 return self._ended()
             if self._overdue() and not self.running:
@@ -229,10 +265,15 @@ class _Run:
         finished, _ = wait(self.running, timeout=TICK, return_when=FIRST_COMPLETED)
         for future in finished:
             task = self.running.pop(future)
-            if not future.cancelled() and future.exception() is None:
+            error = CancelledError() if future.cancelled() else future.exception()
+            if error is None:
                 self._record(future.result())
-            elif not self.stop.is_set():
+            elif self.stop.is_set():
+                continue
+            elif isinstance(error, BrokenExecutor | CancelledError) or _is_death(error):
                 self._again(task)
+            else:
+                raise _no_computing(f"{type(error).__name__}: {error}")
 
     def _again(self, task: tuple[int, int]) -> None:
         """Hand a realisation out again whose worker is gone, unless that is its own fault."""
@@ -253,7 +294,7 @@ class _Run:
         target = self.layout.plan.target
         if self.round.ended == "target":
             return Ending("target", f"the target is reached: {self._error()}")
-        text = f"all {sum(self.round.goals)} realisations are there"
+        text = f"all {sum(self.round.goals)} realisations of the plan are there"
         return Ending("finished", text if target is None else f"{text}; {self._error()}")
 
     def _error(self) -> str:

@@ -13,7 +13,8 @@ from typing import Any, NamedTuple
 from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import PATCH_AREA, Region, check_regions
-from lozenge_engine.placement import mirror_images, with_separation
+from lozenge_engine.kernels import cuts
+from lozenge_engine.placement import mirror_images, scaled, with_separation
 from lozenge_engine.plan import AxisName, CampaignPlan
 from lozenge_engine.sections import sections_of
 
@@ -73,7 +74,7 @@ class Sprinkling(NamedTuple):
     density : float
         Elements per unit area.
     cells : tuple of int
-        Indices of `Design.cells`, those of one mass together.
+        Indices of `Design.cells`, those of one mass together, the deepest search first.
     """
 
     kind: str
@@ -190,11 +191,16 @@ def design(setup: Setup, plan: CampaignPlan) -> Design:
             left_out.append(f"{name}: {error}")
             continue
         points.append(Point(values, changed))
+        own: list[Cell] = []
         for k, shift in enumerate(plan.placements):
             try:
-                cells.append(_cell(changed, len(points) - 1, k, shift))
+                cell = _cell(changed, len(points) - 1, k, shift)
+                _check_new(cell, own, plan)
             except InputError as error:
                 left_out.append(f"{name}, placement {shift[0]:g}, {shift[1]:g}: {error}")
+            else:
+                own.append(cell)
+        cells += own
     if not cells:
         raise refuse(
             "axes", given=left_out[0], allowed="at least one point that fits", do="change the axes"
@@ -220,6 +226,14 @@ def _applied(setup: Setup, values: Mapping[AxisName, Any]) -> Setup:
             allowed="an equal row",
             do="choose another axis or a row",
         )
+    count = setup.region_count if setup.region_list is None else len(setup.region_list)
+    if "separation" in values and values.get("region_count", count) < 2:
+        raise refuse(
+            "separation",
+            given="one region, which has none",
+            allowed="two or more regions",
+            do="choose another axis or add a region",
+        )
     if "truncation_mode" not in changes and "alpha" in changes and _rules_without_alpha(setup):
         raise refuse(
             "alpha",
@@ -237,16 +251,13 @@ def _rules_without_alpha(setup: Setup) -> bool:
 
 
 def _resized(setup: Setup, half_width: float, *, keep_gap: bool) -> Setup:
-    """All regions scaled about the patch's centre so that the smallest has this half-width."""
+    """All regions scaled so that the smallest has this half-width, touched corners kept."""
     regions = setup.regions()
     factor = half_width / min(region.half_width for region in regions)
     if setup.region_list is None:
         gap = setup.separation if keep_gap else factor * setup.separation
         return setup.with_(half_width=half_width, separation=gap)
-    layout = tuple(
-        replace(r, t0=factor * r.t0, x0=factor * r.x0, half_width=factor * r.half_width)
-        for r in regions
-    )
+    layout = scaled(regions, factor)
     if keep_gap and len(layout) > 1:
         layout = with_separation(layout, setup.separation)
     check_regions(layout)
@@ -285,6 +296,31 @@ def _cell(setup: Setup, point: int, placement: int, shift: tuple[float, float]) 
     )
 
 
+def _check_new(cell: Cell, others: list[Cell], plan: CampaignPlan) -> None:
+    """Refuse a placement that is a mirror image of another one: one class has both."""
+    images = _sets(cell)
+    for other in others:
+        if images & _sets(other):
+            t, x = plan.placements[other.placement]
+            raise refuse(
+                "placement",
+                given=f"a mirror image of the placement {t:g}, {x:g}",
+                allowed="placements that are no mirror images of each other",
+                do="take one of them out",
+            )
+
+
+def _sets(cell: Cell) -> set[frozenset[tuple[float, ...]]]:
+    """The sets of diamonds of a cell's layouts, up to rounding."""
+    return {
+        frozenset(
+            (round(r.t0, 9), round(r.x0, 9), round(r.half_width, 9), round(r.boost, 9))
+            for r in layout
+        )
+        for layout in cell.layouts
+    }
+
+
 def _shared(cells: list[Cell]) -> tuple[Sprinkling, ...]:
     """Cells by what fixes their point set, in the order in which that first appears."""
     groups: dict[tuple[str, float], list[int]] = {}
@@ -292,6 +328,12 @@ def _shared(cells: list[Cell]) -> tuple[Sprinkling, ...]:
         source = cell.config.points
         groups.setdefault((source.kind, source.density), []).append(i)
     return tuple(
-        Sprinkling(kind, density, tuple(sorted(own, key=lambda i: (cells[i].config.mass, i))))
+        Sprinkling(kind, density, tuple(sorted(own, key=lambda i: (*_depth(cells[i]), i))))
         for (kind, density), own in groups.items()
     )
+
+
+def _depth(cell: Cell) -> tuple[float, float]:
+    """Mass and floor of the patch's search: the deepest one comes first and serves the others."""
+    elements = round(PATCH_AREA * cell.config.points.density)
+    return cell.config.mass, cuts.needed_floor(cell.config.patch_rule, elements=elements)

@@ -17,7 +17,7 @@ from lozenge_engine.config import Setup
 from lozenge_engine.errors import InputError
 from lozenge_engine.geometry import PATCH_AREA, Region, check_regions, largest_separation
 from lozenge_engine.pipeline import DENSE_LIMIT
-from lozenge_engine.placement import largest_mean_gap, mirror_images, with_separation
+from lozenge_engine.placement import largest_mean_gap, mirror_images, scaled, with_separation
 from lozenge_engine.samples import Draw
 
 __all__ = [
@@ -157,42 +157,6 @@ def density_draws(setup: Setup) -> Plan:
         tuple(draws[i] for i in order),
         tuple(rungs[i] for i in order),
         tuple(left_out),
-    )
-
-
-def scaled(regions: tuple[Region, ...], factor: float) -> tuple[Region, ...]:
-    """All regions scaled about the patch's centre, or about the corner that they touch.
-
-    Parameters
-    ----------
-    regions : tuple of Region
-        One layout; of several touched corners the first of left, right, future, past counts.
-    factor : float
-        Multiple of sizes and gaps, > 0.
-
-    Returns
-    -------
-    tuple of Region
-        In the order given; whether they fit in the patch is not checked.
-
-    Raises
-    ------
-    InputError
-        If a half-width leaves (0, 1].
-    """
-    fixed_t, fixed_x = 0.0, 0.0
-    for t, x in ((0.0, -1.0), (0.0, 1.0), (1.0, 0.0), (-1.0, 0.0)):
-        if any(abs(t - ct) + abs(x - cx) < 1e-9 for region in regions for ct, cx in region.corners):
-            fixed_t, fixed_x = t, x
-            break
-    return tuple(
-        replace(
-            r,
-            t0=fixed_t + factor * (r.t0 - fixed_t),
-            x0=fixed_x + factor * (r.x0 - fixed_x),
-            half_width=factor * r.half_width,
-        )
-        for r in regions
     )
 
 

@@ -15,7 +15,7 @@ from lozenge_engine.kernels import gls
 from lozenge_engine.kernels.laws import calabrese_cardy_slope, nominal_modes
 from lozenge_engine.kernels.scaling import Estimate, estimate
 from lozenge_engine.placement import gaps
-from lozenge_engine.series import Series, groups_of, leading, series_of
+from lozenge_engine.series import Series, fittable, groups_of, leading, series_of
 from lozenge_engine.store import Results, Table
 from lozenge_engine.sweeps import ends_inside, nearest_pair
 
@@ -29,6 +29,8 @@ __all__ = [
 ]
 
 FloatArray = NDArray[np.float64]
+BY_COUNT = ("root_count", "equal_share")
+"""Rules of the regions that the Calabrese-Cardy law speaks of."""
 STEPS = 24
 """Points of the curve of error against CPU time."""
 
@@ -52,6 +54,8 @@ class CellEstimate(NamedTuple):
         Kept over nominal modes, mean over regions; NaN without samples.
     untrusted : int
         Samples that carry a mark; they are in the means.
+    missing : int
+        Samples without a number; the others are a selected sample then.
     """
 
     cell: int
@@ -63,6 +67,7 @@ class CellEstimate(NamedTuple):
     cross_block: float
     kept_ratio: float
     untrusted: int
+    missing: int
 
 
 class Regime(NamedTuple):
@@ -73,14 +78,16 @@ class Regime(NamedTuple):
     elements, kept_ratio, size : (float, float)
         Least and largest over its cells: expected elements of the smallest region, kept over
         nominal modes, half-width of the largest region in patch half-widths.
-    gap : float
-        Smallest gap between neighbours in patch half-widths; NaN for one region.
+    gap, gap_lengths : float
+        Smallest gap between neighbours in patch half-widths, and the smallest in discreteness
+        lengths a; NaN for one region.
     """
 
     elements: tuple[float, float]
     kept_ratio: tuple[float, float]
     size: tuple[float, float]
     gap: float
+    gap_lengths: float
 
 
 class FitOf(NamedTuple):
@@ -95,7 +102,9 @@ class FitOf(NamedTuple):
     note : str
         Why there is no fit; empty with one.
     reference : float or None
-        Calabrese-Cardy slope, for a density axis of a massless field with a cut.
+        Calabrese-Cardy slope, for a density axis of a massless field cut by each region's count.
+    no_reference : str
+        Why there is none; empty with one.
     regime : Regime
         Where it stands.
     """
@@ -104,6 +113,7 @@ class FitOf(NamedTuple):
     report: gls.SlopeReport | None
     note: str
     reference: float | None
+    no_reference: str
     regime: Regime
 
     @property
@@ -132,6 +142,8 @@ class Estimates(NamedTuple):
         Reasons, the most frequent first.
     cpu_seconds : float
         Of all realisations that did not fail.
+    error : float
+        Error of the target now; infinite while a part of it is unknown, NaN without a target.
     history : tuple of (float, float)
         CPU seconds, and the error of the target that they had bought; empty without a target.
     """
@@ -142,6 +154,7 @@ class Estimates(NamedTuple):
     failed: int
     failures: tuple[tuple[str, int], ...]
     cpu_seconds: float
+    error: float
     history: tuple[tuple[float, float], ...]
 
 
@@ -168,6 +181,7 @@ def estimates(results: Results) -> Estimates:
         failed=sum(failed for _, failed in counts),
         failures=results.failures(),
         cpu_seconds=float(sum(table.seconds.sum() for table in tables)),
+        error=target_error(layout, tables),
         history=_history(layout, tables),
     )
 
@@ -187,6 +201,7 @@ def _cell(index: int, cell: Cell, table: Table, column: int) -> CellEstimate:
     regions = cell.config.regions
     pair = _pair_column(cell.config)
     entropy = table.entropy[column]
+    missing = ~np.isfinite(table.union_support[:, column])
     nominal = nominal_modes(1.0) * np.sqrt(np.maximum(table.region_elements[column], 1.0))
     ratio = table.kept[column] / nominal
     return CellEstimate(
@@ -197,8 +212,9 @@ def _cell(index: int, cell: Cell, table: Table, column: int) -> CellEstimate:
         None if pair is None else estimate(table.pair_support[column][:, pair]),
         None if pair is None else estimate(table.pair_direct_sum[column][:, pair]),
         math.nan if pair is None else estimate(table.cross_block[column][:, pair]).mean,
-        float(ratio.mean()) if ratio.size else math.nan,
-        int((~table.trusted[:, column]).sum()),
+        estimate(ratio.ravel()).mean,
+        int((~table.trusted[:, column] & ~missing).sum()),
+        int(missing.sum()),
     )
 
 
@@ -217,31 +233,38 @@ def _pair_column(config: Config) -> int | None:
 def _fit(layout: Design, tables: Sequence[Table], series: Series) -> FitOf:
     smallest = layout.plan.smallest_region
     regime = _regime(layout, tables, series)
-    reference = _reference(layout, series)
-    sizes = {round(layout.cells[i].x, 9) for i in series.used}
-    if len(sizes) < 3:
+    reference, why_none = _reference(layout, series)
+    if not fittable(layout, series):
+        sizes = {round(layout.cells[i].x, 9) for i in series.used}
         note = (
             f"no fit: {len(sizes)} sizes with at least {smallest} elements in the smallest region, "
             "3 needed"
         )
-        return FitOf(series, None, note, reference, regime)
+        return FitOf(series, None, note, reference, why_none, regime)
     report = gls.report(tuple(groups_of(layout, tables, series).values()))
     if isinstance(report, gls.Refused):
-        return FitOf(series, None, f"no fit: {report.reason}", reference, regime)
-    return FitOf(series, report, "", reference, regime)
+        return FitOf(series, None, f"no fit: {report.reason}", reference, why_none, regime)
+    return FitOf(series, report, "", reference, why_none, regime)
 
 
-def _reference(layout: Design, series: Series) -> float | None:
-    """Slope of the Calabrese-Cardy law, if every cell has the same number of ends."""
+def _reference(layout: Design, series: Series) -> tuple[float | None, str]:
+    """Slope of the Calabrese-Cardy law, or why it says nothing here."""
     if series.axis != "density":
-        return None
+        return None, "region/patch changes along this axis"
     slopes = set()
     for i in series.used:
         config = layout.cells[i].config
-        if config.mass > 0 or "none" in (config.patch_rule.kind, config.region_rule.kind):
-            return None
-        slopes.add(calabrese_cardy_slope(ends_inside(config.regions), order=config.order))
-    return slopes.pop() if len(slopes) == 1 else None
+        ends, a = ends_inside(config.regions), config.points.density**-0.5
+        if config.mass > 0:
+            return None, "the field has a mass"
+        if config.patch_rule.kind != "root_count" or config.region_rule.kind not in BY_COUNT:
+            return None, "the law is for a cut by each region's own count in both stages"
+        if any(1e-9 < gap < a for gap in gaps(config.regions)):
+            return None, "a gap is smaller than the discreteness length"
+        if not ends:
+            return None, "no end of a region lies inside the patch"
+        slopes.add(calabrese_cardy_slope(ends, order=config.order))
+    return (slopes.pop(), "") if len(slopes) == 1 else (None, "no cell is fitted")
 
 
 def _regime(layout: Design, tables: Sequence[Table], series: Series) -> Regime:
@@ -251,11 +274,17 @@ def _regime(layout: Design, tables: Sequence[Table], series: Series) -> Regime:
     elements = [cell.elements for cell in own]
     sizes = [max(r.half_width for r in cell.config.regions) for cell in own]
     between = [gap for cell in own for gap in gaps(cell.config.regions)]
+    lengths = [
+        gap * math.sqrt(cell.config.points.density)
+        for cell in own
+        for gap in gaps(cell.config.regions)
+    ]
     return Regime(
         (min(elements), max(elements)),
         (min(ratios), max(ratios)),
         (min(sizes), max(sizes)),
         max(0.0, min(between)) if between else math.nan,
+        max(0.0, min(lengths)) if lengths else math.nan,
     )
 
 
@@ -282,7 +311,11 @@ def target_error(layout: Design, tables: Sequence[Table]) -> float:
     if target is None:
         return math.nan
     if target.quantity == "slope":
-        found = [_slope_error(layout, tables, series) for series in series_of(layout)]
+        found = [
+            _slope_error(layout, tables, series)
+            for series in series_of(layout)
+            if fittable(layout, series)
+        ]
     else:
         found = [
             _ratio(e.error, e.mean) if target.relative else e.error

@@ -17,7 +17,7 @@ from lozenge_engine.plan import Axis, CampaignPlan, Target
 from lozenge_engine.presets import Preset
 from lozenge_engine.realisation import realise
 from lozenge_engine.schedule import first_round, nominal_seconds
-from lozenge_engine.series import Series, series_of
+from lozenge_engine.series import Series, check_target, series_of
 
 __all__ = ["Forecast", "ForecastRow", "forecast", "needed"]
 
@@ -101,7 +101,8 @@ def forecast(preset: Preset, *, workers: int) -> Forecast:
     Raises
     ------
     InputError
-        If the preset holds no campaign or nothing of it can be computed.
+        If the preset holds no campaign, nothing of it can be computed, or nothing of its target
+        can ever be known.
     """
     plan = preset.campaign
     if plan is None:
@@ -112,6 +113,7 @@ def forecast(preset: Preset, *, workers: int) -> Forecast:
             do="add one, or start from lozenge presets nested-diamond",
         )
     layout = design(preset.setup, plan)
+    check_target(layout)
     speed = _speed()
     wanted = needed(layout)
     counts = [min(n, plan.realisations) for n in wanted]

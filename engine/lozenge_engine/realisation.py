@@ -104,6 +104,12 @@ def _mean(readings: tuple[Reading, ...]) -> Sample:
     )
 
 
+def _without_numbers(regions: int) -> Sample:
+    """What stands for a cell that cannot be computed on a realisation."""
+    one, pairs = np.full(regions, np.nan), np.full(regions * (regions - 1) // 2, np.nan)
+    return Sample(one, one, one, np.nan, np.nan, pairs, pairs, pairs, trusted=False)
+
+
 def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     """Draw one realisation and compute all cells that share it.
 
@@ -117,9 +123,10 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     Returns
     -------
     Record
-        With the reason instead of samples if a cell cannot be computed or an array does not fit
-        in memory; the same to the bit wherever and whenever it is computed with one thread of
-        linear algebra and the same libraries.
+        A cell that cannot be computed, such as one with a region of fewer than two elements, has
+        NaN for numbers.  With the reason instead of samples if no cell can be computed or an array
+        does not fit in memory; the same to the bit wherever and whenever it is computed with one
+        thread of linear algebra and the same libraries.
 
     Notes
     -----
@@ -136,17 +143,22 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     n = points.u.size
     fraction = count_relations(points.u, points.v) / (n * (n - 1) / 2) if n > 1 else float("nan")
     samples: list[Sample] = []
-    reason = ""
+    reasons: list[str] = []
     stages = Stages(threads_from=ONE_THREAD, compiled=True)
     try:
         for i in own.cells:
             cell = layout.cells[i]
-            config = replace(cell.config, points=source)
-            samples.append(_mean(take(Draw(config=config, layouts=cell.layouts), stages=stages)))
-    except InputError as error:
-        samples, reason = [], str(error)
+            draw = Draw(config=replace(cell.config, points=source), layouts=cell.layouts)
+            try:
+                samples.append(_mean(take(draw, stages=stages)))
+            except InputError as error:
+                # Of this cell alone: without the others it would select their sprinklings.
+                reasons.append(str(error))
+                samples.append(_without_numbers(len(cell.config.regions)))
     except MemoryError:
-        samples, reason = [], "not enough memory"
+        samples, reasons = [], ["not enough memory"]
+    if len(reasons) >= len(samples):
+        samples = []
     return Record(
         sprinkling,
         realisation,
@@ -155,5 +167,5 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
         n,
         fraction,
         tuple(samples),
-        reason,
+        "" if samples else reasons[0],
     )

@@ -30,6 +30,8 @@ GROWTH = 1.5
 LEAST = 1.05
 """A round adds at least this, so that the end is reached."""
 
+STEPS = 400
+"""A round is handed out in about so many steps."""
 LEAST_SHARE = 0.05
 """Every sprinkling has at least this share of the time: the best place for a slope's error is at
 the ends of the ladder, but it takes the points between them to see whether the line fits."""
@@ -68,15 +70,15 @@ def nominal_seconds(layout: Design, sprinkling: int) -> float:
     float
         Seconds: the patch's modes once for each mass, and the second stage of every layout.
     """
-    seconds, masses = 0.0, set()
+    seconds = 0.0
+    first: dict[float, float] = {}
     for i in layout.sprinklings[sprinkling].cells:
         cell = layout.cells[i]
+        mass = cell.config.mass
         whole, _, second = nominal(cell.config)
-        if cell.config.mass not in masses:
-            masses.add(cell.config.mass)
-            seconds += whole - second
+        first[mass] = max(first.get(mass, 0.0), whole - second)  # the deepest search serves all
         seconds += second * len(cell.layouts)
-    return seconds
+    return seconds + sum(first.values())
 
 
 def first_round(layout: Design) -> Round:
@@ -93,8 +95,13 @@ def first_round(layout: Design) -> Round:
         All realisations without a target, the pilot with one.
     """
     plan = layout.plan
-    most = plan.realisations if plan.target is None else min(PILOT, plan.realisations)
-    return Round((most,) * len(layout.sprinklings), math.inf if plan.target else math.nan, "")
+    if plan.target is None:
+        return Round((plan.realisations,) * len(layout.sprinklings), math.nan, "")
+    pilots = [PILOT] * len(layout.sprinklings)
+    if plan.target.quantity == "slope":
+        # A covariance that is to weigh P cells takes more rows than these.
+        pilots = [max(PILOT, 2 * len(own.cells) + 6) for own in layout.sprinklings]
+    return Round(tuple(min(n, plan.realisations) for n in pilots), math.inf, "")
 
 
 def advance(layout: Design, goals: tuple[int, ...], tables: Sequence[Table]) -> Round:
@@ -122,7 +129,7 @@ def advance(layout: Design, goals: tuple[int, ...], tables: Sequence[Table]) -> 
         for table, goal in zip(tables, goals, strict=True)
     ]
     error = target_error(layout, seen)
-    if error <= target.error:
+    if error <= target.error and min(goals) >= PILOT:
         return Round(goals, error, "target")
     if min(goals) >= most:
         return Round(goals, error, "all")
@@ -156,8 +163,10 @@ def _for_slope(
             g = min(behind, key=lambda g: spent[g])
         else:
             g = max(more, key=lambda g: variances[g] / (counts[g] * (counts[g] + 1) * costs[g]))
-        counts[g] += 1
-        left -= costs[g]
+        step = max(1, int(left / (STEPS * costs[g])))
+        step = min(step, layout.plan.realisations - counts[g])
+        counts[g] += step
+        left -= step * costs[g]
     return tuple(counts)
 
 

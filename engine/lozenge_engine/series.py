@@ -9,13 +9,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.design import Cell, Design
+from lozenge_engine.errors import refuse
 from lozenge_engine.kernels import gls
 from lozenge_engine.store import Table
+from lozenge_engine.sweeps import ends_inside
 
-__all__ = ["Series", "groups_of", "leading", "series_of"]
+__all__ = ["Series", "check_target", "fittable", "groups_of", "leading", "series_of"]
 
 FloatArray = NDArray[np.float64]
 FIT_AXES = ("density", "half_width")
+LEAST_SIZES = 3
+"""Fewer sizes lie on a line whatever they are."""
 
 
 class Series(NamedTuple):
@@ -24,7 +28,8 @@ class Series(NamedTuple):
     Attributes
     ----------
     label : str
-        Values of the other axis; empty if there is none.
+        Values of the other axis and, where they differ, the ends of regions inside the patch;
+        empty if there is nothing to tell apart.
     axis : {"density", "half_width"}
         What is varied.
     cells : tuple of int
@@ -50,25 +55,90 @@ def series_of(layout: Design) -> tuple[Series, ...]:
     Returns
     -------
     tuple of Series
-        One for each value of the other axis, in its order; none without a density or half-width
-        axis.  Of two such axes the first is varied.
+        One for each value of the other axis, in its order, and for each number of ends inside
+        the patch, since the slope goes with that; none without a density or half-width axis.  Of
+        two such axes the first is varied.
     """
     names = [axis.name for axis in layout.plan.axes]
     varied = next((name for name in names if name in FIT_AXES), None)
     if varied is None:
         return ()
     others = [name for name in names if name != varied]
-    groups: dict[str, list[int]] = {}
+    groups: dict[tuple[str, int], list[int]] = {}
     for i, cell in enumerate(layout.cells):
         values = layout.points[cell.point].values
         label = ", ".join(f"{name} {values[name]}" for name in others)
-        groups.setdefault(label, []).append(i)
+        groups.setdefault((label, ends_inside(cell.config.regions)), []).append(i)
+    labels = [label for label, _ in groups]
     smallest = layout.plan.smallest_region
     axis: Literal["density", "half_width"] = "density" if varied == "density" else "half_width"
     return tuple(
-        Series(label, axis, tuple(own), tuple(i for i in own if _large(layout.cells[i], smallest)))
-        for label, own in groups.items()
+        Series(
+            _labelled(label, ends if labels.count(label) > 1 else None),
+            axis,
+            tuple(own),
+            tuple(i for i in own if _large(layout.cells[i], smallest)),
+        )
+        for (label, ends), own in groups.items()
     )
+
+
+def _labelled(label: str, ends: int | None) -> str:
+    told = "" if ends is None else f"{ends} end{'' if ends == 1 else 's'} inside"
+    return ", ".join(filter(None, (label, told)))
+
+
+def fittable(layout: Design, series: Series) -> bool:
+    """Whether a series has the three sizes that a fit takes.
+
+    Parameters
+    ----------
+    layout : Design
+        The campaign.
+    series : Series
+        One of its fits.
+
+    Returns
+    -------
+    bool
+        Counting sizes with enough elements only.
+    """
+    return len({round(layout.cells[i].x, 9) for i in series.used}) >= LEAST_SIZES
+
+
+def check_target(layout: Design) -> None:
+    """Refuse a target of which nothing can ever be known.
+
+    Parameters
+    ----------
+    layout : Design
+        The campaign.
+
+    Raises
+    ------
+    InputError
+        For a slope that no fit can give, or a mutual information of one region.
+    """
+    target = layout.plan.target
+    if target is None:
+        return
+    if target.quantity == "slope" and not any(fittable(layout, s) for s in series_of(layout)):
+        raise refuse(
+            "target",
+            given="a slope, with no fit of three sizes",
+            allowed="a density or half_width axis with at least three sizes of "
+            f"{layout.plan.smallest_region} elements or more in the smallest region",
+            do="add points, lower smallest_region, or choose another target",
+        )
+    if target.quantity == "mutual_information" and all(
+        len(cell.config.regions) < 2 for cell in layout.cells
+    ):
+        raise refuse(
+            "target",
+            given="mutual information of one region",
+            allowed="two or more regions",
+            do="add a region or choose another target",
+        )
 
 
 def _large(cell: Cell, smallest: int) -> bool:

@@ -25,8 +25,8 @@ import pytest
 
 import lozenge_dashboard
 from lozenge_dashboard import campaign_run, cli
+from lozenge_dashboard.campaign_checks import controls
 from lozenge_dashboard.campaign_plan import progress_text
-from lozenge_dashboard.campaign_report import controls
 from lozenge_dashboard.exchange import as_preset
 from lozenge_engine import campaign, presets, store
 from lozenge_engine.config import PointSource, Setup

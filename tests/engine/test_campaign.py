@@ -23,6 +23,7 @@ import pytest
 from lozenge_engine.campaign import ATTEMPTS, INNOCENT, Progress, run
 from lozenge_engine.config import Setup
 from lozenge_engine.design import design
+from lozenge_engine.errors import InputError
 from lozenge_engine.plan import Axis, CampaignPlan, Target
 from lozenge_engine.presets import Preset, dumps
 from lozenge_engine.realisation import realise
@@ -164,6 +165,27 @@ def test_what_kills_every_worker_is_recorded_and_stops_nothing(tmp_path: Path) -
         assert results.counts() == ((6, 0), (6, 0), (6, 6))
         assert results.failures()[0][1] == 6
         assert "workers ended" in results.failures()[0][0]
+
+
+def test_an_executor_that_cannot_compute_ends_the_run_and_spoils_nothing(tmp_path: Path) -> None:
+    class Broken(Here):
+        def submit(self, fn: Callable[..., Any], /, *args: Any, **kwargs: Any) -> Future[Any]:
+            future: Future[Any] = Future()
+            future.set_exception(ModuleNotFoundError("no such module on this worker"))
+            return future
+
+    with create(tmp_path / "a.sqlite", preset()) as results:
+        with pytest.raises(InputError, match="no such module"):
+            run(results, executor=Broken(), capacity=1)
+        with pytest.raises(InputError, match="the scheduler is gone"):
+            run(results, executor=Here(), capacity=1, trouble=lambda: "the scheduler is gone")
+        assert results.done() == set()
+        assert run(results, executor=Here(), capacity=1).reason == "finished"
+
+
+def test_a_target_is_not_called_reached_before_the_pilot(tmp_path: Path) -> None:
+    wanted = preset(target=Target(quantity="entropy", error=9.0), realisations=5)
+    assert finished(tmp_path / "a.sqlite", wanted, Here()) == "finished"
 
 
 def test_a_realisation_that_cannot_be_computed_is_recorded(tmp_path: Path) -> None:

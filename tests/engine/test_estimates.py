@@ -12,14 +12,18 @@ import numpy as np
 import pytest
 
 from lozenge_engine.campaign import run
-from lozenge_engine.config import Setup
+from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.design import design
 from lozenge_engine.errors import InputError
 from lozenge_engine.estimates import Estimates, estimates, target_error
 from lozenge_engine.forecast import forecast, needed
+from lozenge_engine.geometry import Region
+from lozenge_engine.kernels import gls
 from lozenge_engine.kernels.laws import nominal_modes
 from lozenge_engine.plan import Axis, CampaignPlan, Target
 from lozenge_engine.presets import Preset
+from lozenge_engine.realisation import realise
+from lozenge_engine.schedule import nominal_seconds
 from lozenge_engine.series import groups_of, leading, series_of
 from lozenge_engine.store import Results, create
 
@@ -221,3 +225,116 @@ def test_a_sharper_target_needs_more_realisations_by_its_square() -> None:
 def test_a_preset_without_a_campaign_has_no_forecast() -> None:
     with pytest.raises(InputError, match="campaign"):
         forecast(Preset(title="t", sentence="s"), workers=1)
+
+
+# ------------------------------------------------- what must not pass unsaid
+
+
+def finished(path: Path, wanted: Preset) -> Estimates:
+    with create(path, wanted) as results:
+        run(results, executor=Here(), capacity=1)
+        return estimates(results)
+
+
+def test_a_cell_without_numbers_does_not_select_the_others_sprinklings(tmp_path: Path) -> None:
+    small = Axis(name="half_width", values=(0.1, 0.4))
+    setup = Setup(region_count=1, points=PointSource(density=60.0))
+    both = finished(tmp_path / "a.sqlite", preset(setup, axes=(small,), realisations=40))
+    large = Axis(name="half_width", values=(0.4,))
+    alone = finished(tmp_path / "b.sqlite", preset(setup, axes=(large,), realisations=40))
+    assert 0 < both.cells[0].missing < 40
+    assert both.failed == both.cells[1].missing == 0
+    assert both.cells[1].entropy == alone.cells[0].entropy
+    assert both.cells[0].entropy.count == 40 - both.cells[0].missing
+
+
+def test_a_fit_of_a_selected_sample_is_never_settled(ladder: Results) -> None:
+    tables = [ladder.table(g) for g in range(4)]
+    groups = groups_of(ladder.design, tables, series_of(ladder.design)[0])
+    holes = [group.samples.copy() for group in groups.values()]
+    holes[1][3] = math.nan
+    report = gls.report(
+        tuple(g._replace(samples=s) for g, s in zip(groups.values(), holes, strict=True))
+    )
+    assert not isinstance(report, gls.Refused)
+    assert report.fit.left_out == 1
+    assert not report.settled
+
+
+def test_cells_with_different_numbers_of_ends_have_fits_of_their_own() -> None:
+    plan = CampaignPlan(axes=(LADDER,), placements=((0.0, 0.0), (0.0, -0.7)))
+    found = series_of(design(Setup(region_count=1, half_width=0.3), plan))
+    assert [series.label for series in found] == ["2 ends inside", "1 end inside"]
+    assert [len(series.cells) for series in found] == [4, 4]
+
+
+def test_a_half_width_axis_keeps_a_region_in_its_corner() -> None:
+    corner = Setup(region_list=(Region(x0=-0.5, half_width=0.5),))
+    axis = Axis(name="half_width", values=(0.2, 0.3, 0.5))
+    layout = design(corner, CampaignPlan(axes=(axis,)))
+    assert [cell.config.regions[0].x0 for cell in layout.cells] == pytest.approx([-0.8, -0.7, -0.5])
+    assert len(series_of(layout)) == 1
+
+
+@pytest.mark.parametrize(
+    ("setup", "why"),
+    [
+        (Setup(region_count=1, half_width=0.3, mass=0.5), "mass"),
+        (Setup(region_count=1, half_width=0.3, truncation_mode="fixed_number"), "own count"),
+        (Setup(region_count=2, half_width=0.3, truncation_mode="union_count"), "own count"),
+        (Setup(region_count=2, half_width=0.3, separation=1e-3), "discreteness"),
+        (Setup(region_count=1, half_width=1.0), "no end"),
+    ],
+)
+def test_no_reference_stands_where_the_law_says_nothing(
+    tmp_path: Path, setup: Setup, why: str
+) -> None:
+    with create(tmp_path / "a.sqlite", preset(setup)) as results:
+        (fit,) = estimates(results).fits
+    assert fit.reference is None
+    assert why in fit.no_reference
+
+
+@pytest.mark.parametrize(
+    ("axes", "target"),
+    [
+        ((LADDER,), "mutual_information"),
+        ((Axis(name="mass", values=(0.0, 1.0)),), "slope"),
+        ((Axis(name="density", values=(100.0, 200.0)),), "slope"),
+    ],
+)
+def test_a_target_that_can_never_be_known_is_refused(
+    tmp_path: Path, axes: tuple[Axis, ...], target: Any
+) -> None:
+    wanted = preset(axes=axes, target=Target(quantity=target, error=0.1))
+    with pytest.raises(InputError, match="target"):
+        forecast(wanted, workers=1)
+    with create(tmp_path / "a.sqlite", wanted) as results, pytest.raises(InputError):
+        run(results, executor=Here(), capacity=1)
+
+
+def test_placements_that_mirror_each_other_are_one_class() -> None:
+    plan = CampaignPlan(axes=(LADDER,), placements=((0.0, 0.0), (0.0, 0.3), (0.0, -0.3)))
+    layout = design(Setup(region_count=1, half_width=0.3), plan)
+    assert {cell.placement for cell in layout.cells} == {0, 1}
+    assert "mirror image of the placement 0, 0.3" in layout.left_out[0]
+
+
+def test_rules_share_one_search_whatever_their_order() -> None:
+    def samples(values: tuple[float, ...]) -> dict[float, float]:
+        plan = CampaignPlan(axes=(Axis(name="alpha", values=values),))
+        layout = design(Setup(region_count=1, points=PointSource(density=300.0)), plan)
+        record = realise(layout, 0, 0)
+        order = layout.sprinklings[0].cells
+        return {values[i]: s.union_support for i, s in zip(order, record.samples, strict=True)}
+
+    assert samples((0.5, 1.0, 2.0)) == samples((2.0, 1.0, 0.5))
+
+
+def test_costs_count_the_deepest_search_once() -> None:
+    def seconds(values: tuple[float, ...]) -> float:
+        plan = CampaignPlan(axes=(Axis(name="alpha", values=values),))
+        return nominal_seconds(design(Setup(), plan), 0)
+
+    assert seconds((0.5, 2.0)) == seconds((2.0, 0.5))
+    assert seconds((0.5,)) < seconds((0.5, 2.0)) < seconds((0.5,)) + seconds((2.0,))

@@ -342,9 +342,9 @@ def caution(watch: Watch, choices: CampaignChoices) -> str:
         parts.append("one realisation: no error is known")
     if min(counts) == 0:
         parts.append("some points wait for their first realisation")
-    marked = sum(cell.untrusted for cell in numbers)
+    marked = sum(cell.untrusted + cell.missing for cell in numbers)
     if marked:
-        parts.append(f"{thousands(marked)} samples carry a mark (table)")
+        parts.append(f"{thousands(marked)} samples carry a mark or have no number (table)")
     parts.append(
         "nearest pair, union by support" if choices.quantity == "mutual" else "union by support"
     )

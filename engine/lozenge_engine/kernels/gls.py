@@ -172,6 +172,12 @@ def _judged(full: LineFit, by_smallest: tuple[tuple[float, LineFit], ...]) -> tu
     """Whether the slope is settled, and why or why not."""
     if not math.isfinite(full.p_value):
         return False, "too few realisations to tell whether the line fits"
+    if full.left_out:
+        return (
+            False,
+            f"{full.left_out} realisations without a number are left out: what is left "
+            "is a selected sample",
+        )
     if full.p_value <= LEAST_P:
         return False, f"the line does not fit, p = {full.p_value:.2g}"
     if len(by_smallest) < 2:
