@@ -180,7 +180,7 @@ def test_a_run_records_every_realisation_and_reports_points_fit_and_prediction(
     file = tmp_path / "out.results"
     assert cli.main(["run", small, "--results", str(file)]) == cli.OK
     out, err = capsys.readouterr()
-    assert out.startswith("all 64 realisations are there\n\nSmall\n")
+    assert out.startswith("all 64 realisations of the plan are there\n\nSmall\n")
     for density in (60, 90, 130, 190):
         number = r"\d\.\d+\(\d+\)"
         assert re.search(rf"^{density} +\d+ +16 +{number} +\d\.\d\d$", out, re.MULTILINE)
@@ -348,7 +348,9 @@ def test_the_json_holds_the_estimates_without_nan(
     assert fit["reference"] == pytest.approx(1 / 3)
     assert found["preset"] == json.loads(Path(small).read_text(encoding="utf-8"))
     assert found["prediction"]["measured"] > 0
-    assert {"numpy", "python", "lozenge"} <= set(found["versions"])
+    (made,) = found["versions"]
+    assert {"numpy", "python", "lozenge"} <= set(made)
+    assert made["realisations"] == 64
     capsys.readouterr()
     assert cli.main(["results", str(file), "--json", "-"]) == cli.OK
     assert json.loads(capsys.readouterr().out) == found
@@ -552,7 +554,7 @@ def test_a_cluster_one_of_whose_workers_is_killed_computes_the_same_samples(
         out, err = child.communicate(timeout=120)
     assert child.returncode == cli.OK, err
     assert "2 at a time" in err
-    assert out.startswith("all 240 realisations are there\n")
+    assert out.startswith("all 240 realisations of the plan are there\n")
     assert _numbers(there) == _numbers(here)
 
 
