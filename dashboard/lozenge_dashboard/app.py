@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import errno
 import socket
 import sys
@@ -104,6 +105,14 @@ def _say(line: str) -> None:
     sys.stdout.flush()
 
 
+def _unless_gone(loop: asyncio.AbstractEventLoop, context: dict[str, Any]) -> None:
+    """Report what went wrong in the event loop; a tab that closes while written to is no error."""
+    from tornado.websocket import WebSocketClosedError
+
+    if not isinstance(context.get("exception"), WebSocketClosedError):
+        loop.default_exception_handler(context)
+
+
 def serve(
     preset: Preset | None = None,
     path: Path | None = None,
@@ -163,6 +172,7 @@ def serve(
         with blas_threads(1):
             server = pn.serve(factories, **options)
             server.start()
+            server.io_loop.asyncio_loop.set_exception_handler(_unless_gone)
             _say(f"Lozenge is at {address} (Ctrl-C ends it).")
             if browser:
                 threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()

@@ -17,7 +17,7 @@ from lozenge_engine.plan import Axis, CampaignPlan, Target
 from lozenge_engine.presets import Preset
 from lozenge_engine.realisation import realise
 from lozenge_engine.schedule import first_round, nominal_seconds
-from lozenge_engine.series import Series, check_target, series_of
+from lozenge_engine.series import Series, check_target, fittable, series_of
 
 __all__ = ["Forecast", "ForecastRow", "forecast", "needed"]
 
@@ -70,7 +70,8 @@ class Forecast(NamedTuple):
     left_out : tuple of str
         Points and placements that cannot be computed, and why.
     note : str
-        That the budget will not do for the target or for all realisations; otherwise empty.
+        That the budget or the realisations will not do, or that a fit is not possible; otherwise
+        empty.
     """
 
     rows: tuple[ForecastRow, ...]
@@ -133,7 +134,7 @@ def forecast(preset: Preset, *, workers: int) -> Forecast:
         )
     seconds = sum(row.seconds * row.realisations for row in rows) / max(1, workers)
     peak = workers * max(row.peak_bytes for row in rows) + PROCESS_BYTES
-    note = _shortfall(plan, seconds, max(wanted))
+    note = "; ".join(filter(None, (_shortfall(plan, seconds, max(wanted)), _no_fit(layout))))
     return Forecast(tuple(rows), workers, seconds, peak, layout.left_out, note)
 
 
@@ -152,6 +153,18 @@ def _shortfall(plan: CampaignPlan, seconds: float, count: int) -> str:
             f"{duration(seconds)}"
         )
     return "; ".join(notes)
+
+
+def _no_fit(layout: Design) -> str:
+    """Which fits will not be possible, however many realisations there are."""
+    without = [series for series in series_of(layout) if not fittable(layout, series)]
+    if not without:
+        return ""
+    names = ", ".join(series.label for series in without if series.label)
+    return (
+        f"no fit{f' for {names}' if names else ''}: fewer than three sizes have "
+        f"{layout.plan.smallest_region} elements or more in their smallest region"
+    )
 
 
 @functools.cache

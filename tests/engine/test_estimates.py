@@ -338,3 +338,10 @@ def test_costs_count_the_deepest_search_once() -> None:
 
     assert seconds((0.5, 2.0)) == seconds((2.0, 0.5))
     assert seconds((0.5,)) < seconds((0.5, 2.0)) < seconds((0.5,)) + seconds((2.0,))
+
+
+def test_a_forecast_says_that_no_fit_will_be_possible() -> None:
+    axis = Axis(name="density", values=(100.0, 300.0, 600.0))
+    told = forecast(preset(axes=(axis, COUNTS), smallest_region=50), workers=1)
+    assert "no fit for region_count 1, region_count 2" in told.note
+    assert "no fit" not in forecast(preset(), workers=1).note
