@@ -11,11 +11,17 @@ from panel.custom import JSComponent
 
 from lozenge_dashboard.controls import ASSETS, FIELDS_JS, Field, Group, as_plain
 from lozenge_dashboard.proposal import Proposal
-from lozenge_engine.forecast import Forecast
-from lozenge_engine.notation import duration, thousands
+from lozenge_engine.errors import InputError
+from lozenge_engine.geometry import PATCH_AREA
+from lozenge_engine.notation import thousands
 from lozenge_engine.plan import Axis, CampaignPlan
 
-__all__ = ["CampaignControls", "Changes", "column_state", "forecast_words"]
+__all__ = [
+    "CampaignControls",
+    "Changes",
+    "column_state",
+    "label_of",
+]
 
 WANTED = Group(
     "What is wanted",
@@ -50,7 +56,8 @@ POINTS = Group(
             "axis",
             "choice",
             "axis",
-            "What differs from point to point; everything else stays as it is on the bench.",
+            "What differs from point to point; all else stays as on the bench, but half-width "
+            "scales sizes and gaps together.",
             options=(
                 ("density", "density"),
                 ("half_width", "half-width"),
@@ -106,13 +113,22 @@ MORE = (
     Field(
         "more_realisations",
         "number",
-        "realisations, most",
+        "most realisations, this file",
         "Raises or lowers the most of each sprinkling; what is finished stays.",
         whole=True,
     ),
-    Field("more_minutes", "number", "budget", "Running time, all runs together.", unit="min"),
-    Field("more_error", "number", "error to reach", "Standard error at which it ends."),
+    Field(
+        "more_minutes",
+        "number",
+        "budget, this file",
+        "Running time, all runs together.",
+        unit="min",
+    ),
+    Field("more_error", "number", "error to reach, this file", "Standard error at which it ends."),
 )
+LABELS = {field.name: field.label for group in (WANTED, POINTS, EFFORT) for field in group.fields}
+LISTED = 8
+"""Most values of an axis that are all written out."""
 AXIS_UNITS = {
     "density": "per area",
     "half_width": "half-widths",
@@ -216,16 +232,55 @@ def _new_fields(proposal: Proposal) -> dict[str, dict[str, Any]]:
         value = getattr(ladder, name) if ladder is not None else 0
         fields[name] = {"value": value, "hidden": ladder is None, "unit": unit}
     fields["points"]["unit"] = ""
+    fields["high"]["note"], fields["points"]["note"] = _spread(proposal)
+    if proposal.axis == "half_width":
+        fields["axis"]["note"] = (
+            "Sizes and gaps scale together; centre and touched corners stay. The number is the "
+            "smallest region's."
+        )
     fields["counts"]["hidden"] = ladder is None
     if proposal.base.setup.region_list is not None:
         fields["counts"]["disabled"] = "a list of regions has its own count"
     return fields
 
 
+def label_of(name: str) -> str:
+    """What stands on screen at a control of the new campaign."""
+    return LABELS[name]
+
+
+def _short(number: float) -> str:
+    """Four significant digits."""
+    return f"{float(f'{number:.4g}'):.12g}"
+
+
+def _spread(proposal: Proposal) -> tuple[str, str]:
+    """The elements between the ends of a density axis; the values of an axis and their spacing."""
+    ladder = proposal.ladder
+    if ladder is None:
+        return "", ""
+    even = proposal.axis == "separation"
+    try:
+        values = ladder.values(even=even)
+    except InputError:
+        return "", ""
+    elements = ""
+    if proposal.axis == "density":
+        low, high = (thousands(round(PATCH_AREA * end)) for end in (values[0], values[-1]))
+        span = low if len(values) == 1 else f"{low} to {high}"
+        elements = f"N = {PATCH_AREA:g} × density: {span} elements expected"
+    said = [_short(value) for value in values]
+    if len(said) > LISTED:
+        said = [*said[: LISTED - 2], "…", said[-1]]
+    spacing = "equally spaced" if even else "equally spaced in the logarithm"
+    return elements, ", ".join(said) + (f"; {spacing}" if len(values) > 2 else "")
+
+
 def _axis_words(axis: Axis) -> str:
     """An axis with its values."""
-    values = ", ".join(f"{v:g}" if isinstance(v, float) else str(v) for v in axis.values)
-    return f"{axis.name} {values}".replace("_", " ")
+    values = ", ".join(_short(v) if isinstance(v, float) else str(v) for v in axis.values)
+    name = axis.name.replace("half_width", "half-width").replace("_", " ")
+    return f"{name} {values}"
 
 
 def _more_fields(plan: CampaignPlan | None, changes: Changes) -> dict[str, dict[str, Any]]:
@@ -295,40 +350,3 @@ def column_state(
         "forecast": dict(forecast),
         "start": start,
     }
-
-
-def forecast_words(forecast: Forecast) -> dict[str, Any]:
-    """A prediction in words, for the column.
-
-    Parameters
-    ----------
-    forecast : Forecast
-        Of the new campaign.
-
-    Returns
-    -------
-    dict
-        `text`, `rows` (one for each sprinkling), `note` and `left_out`.
-    """
-    total = sum(row.realisations for row in forecast.rows)
-    s = "" if forecast.workers == 1 else "s"
-    text = (
-        f"About {duration(forecast.seconds)} with {forecast.workers} worker{s}: "
-        f"{thousands(total)} realisations, {_bytes(forecast.peak_bytes)} of memory at most."
-    )
-    rows = [
-        f"density {thousands(round(row.density))}: {thousands(row.realisations)} × "
-        f"{duration(row.seconds)}, from {thousands(round(row.elements[0]))} elements per region"
-        for row in forecast.rows
-    ]
-    return {
-        "text": text,
-        "rows": rows,
-        "note": forecast.note,
-        "left_out": list(forecast.left_out),
-        "error": "",
-    }
-
-
-def _bytes(count: float) -> str:
-    return f"{count / 1e9:.1f} GB" if count >= 1e9 else f"{count / 1e6:.0f} MB"

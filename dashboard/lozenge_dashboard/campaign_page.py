@@ -14,6 +14,11 @@ from lozenge_engine.presets import Preset
 
 __all__ = ["campaign_pages"]
 
+UNKNOWN = (
+    "The bench page that this address names is not known to this server: this is the preset that "
+    "it started with. Open the campaign from the bench again."
+)
+
 
 def campaign_pages(
     folder: Path, screen: Callable[[str], Preset]
@@ -50,5 +55,8 @@ def _asked(screen: Callable[[str], Preset]) -> Asked:
     def argument(name: str) -> str:
         return b"".join(pn.state.session_args.get(name, [])[:1]).decode("utf-8", "replace")
 
-    preset = screen(argument("from"))
-    return Asked(preset, argument("file"), preset.view.theme)
+    key = argument("from")
+    preset = screen(key)
+    # For a key that it does not know, `screen` gives what it gives for none.
+    note = UNKNOWN if key and preset is screen("") else ""
+    return Asked(preset, argument("file"), preset.view.theme, note)

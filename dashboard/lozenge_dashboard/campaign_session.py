@@ -9,23 +9,33 @@ from __future__ import annotations
 import functools
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any, NamedTuple, cast
+from typing import Any, cast
 
 import panel as pn
 from bokeh.document import Document
 
-from lozenge_dashboard.campaign_board import CampaignBoard
-from lozenge_dashboard.campaign_column import Changes, column_state, forecast_words
-from lozenge_dashboard.campaign_text import state_words
-from lozenge_dashboard.campaigns import Campaigns, Status, Watch
+from lozenge_dashboard.campaign_board import (
+    NO_FORECAST,
+    Asked,
+    CampaignBoard,
+    error_words,
+    forecast_words,
+    foreseen,
+    read_file,
+    sharing_words,
+    tried,
+    worker_caution,
+)
+from lozenge_dashboard.campaign_column import Changes, column_state, label_of
+from lozenge_dashboard.campaigns import Campaigns, Status, Watch, checked_name
 from lozenge_dashboard.jobs import Flight
-from lozenge_dashboard.palette import LOOKS, ThemeName
-from lozenge_dashboard.proposal import checked_name, free_name, suggest
+from lozenge_dashboard.palette import LOOKS
+from lozenge_dashboard.proposal import free_name, suggest
 from lozenge_dashboard.records import CampaignChoices
 from lozenge_dashboard.turn import Turn
-from lozenge_dashboard.typed import put
-from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.forecast import Forecast, forecast
+from lozenge_dashboard.typed import HIDDEN_BY, put, put_more, refusals, standing
+from lozenge_engine.errors import InputError
+from lozenge_engine.forecast import Forecast
 from lozenge_engine.plan import CampaignPlan
 from lozenge_engine.presets import Preset
 from lozenge_engine.workers import cores
@@ -36,15 +46,6 @@ PERIOD = 1000
 """Milliseconds between two looks at the records."""
 REST = 4.0
 """A file is read again after this many times what reading it took."""
-NO_FORECAST: dict[str, Any] = {"text": "", "rows": [], "note": "", "left_out": [], "error": ""}
-
-
-class Asked(NamedTuple):
-    """What the address of the page names."""
-
-    preset: Preset
-    file: str
-    theme: ThemeName
 
 
 class CampaignSession:
@@ -65,16 +66,18 @@ class CampaignSession:
         self.focus: str | None = None
         self.choices = CampaignChoices()
         self.errors: dict[str, str] = {}
-        self.file_error = ""
-        self.shown = asked.file or next(iter(campaigns.running()), "")
+        self.file_error = self.start_error = ""
+        self.note = asked.note
         self.watch: Watch | None = None
         self.changes = Changes()
         self.forecast = dict(NO_FORECAST)
         self.acting = ""
         self._answered = 0
+        self._starting = False
         self._reading = False
         self._version: object = None
         self._rest = 0
+        self._choose(asked.file or next(iter(campaigns.running()), ""))
         self._said: object = None
         self.turn = Turn(cast(Document, pn.state.curdoc))
         later = self.turn.later
@@ -108,6 +111,7 @@ class CampaignSession:
     def receive(self, message: dict[str, Any]) -> None:
         """Take a message of the column."""
         self._answered = message.get("id", self._answered)
+        self.start_error = ""
         with self.turn.together():
             if message.get("kind") == "set":
                 self._set(message["name"], message["value"])
@@ -128,6 +132,8 @@ class CampaignSession:
 
     def _set(self, name: str, value: Any) -> None:
         """Change one control, or say at it why not."""
+        if self.watch is not None:
+            self.file_error = ""
         if name.startswith("more_"):
             self._set_more(name, value)
             return
@@ -137,30 +143,25 @@ class CampaignSession:
             self.errors[name] = str(error)
             return
         self.errors.pop(name, None)
-        if name == "axis":  # its ends are other numbers now
-            for end in ("low", "high", "points"):
-                self.errors.pop(end, None)
+        for other in HIDDEN_BY.get(name, ()):
+            self.errors.pop(other, None)
         if not proposal.named:
             proposal = proposal._replace(file=free_name(proposal, self.campaigns.folder))
         self.proposal = proposal
-        self._predict()
+        if name != "file":
+            self._predict()
 
     def _set_more(self, name: str, value: Any) -> None:
-        """Take a number for the open campaign; the plan checks it when it is used."""
-        kind = name.removeprefix("more_")
+        """Take a number for the open campaign."""
+        if self.watch is None:
+            return
         try:
-            if value == "" and kind == "minutes":
-                value = 0.0
-            if isinstance(value, bool) or not isinstance(value, int | float):
-                raise refuse(kind, given=value, allowed="a number", do="type a number")
-            changes = Changes(**{**self.changes._asdict(), kind: value})
-            if self.watch is not None:
-                changes.applied(self.watch.plan)
+            kind = name.removeprefix("more_")
+            self.changes = put_more(self.changes, kind, value, self.watch)
         except InputError as error:
             self.errors[name] = str(error)
             return
         self.errors.pop(name, None)
-        self.changes = changes
 
     def _act(self, name: str, value: Any) -> None:
         """Do what a button says."""
@@ -187,15 +188,24 @@ class CampaignSession:
 
     def _show(self, name: str) -> None:
         """Look at another results file."""
-        try:
-            self.shown = checked_name(name)
-        except InputError as error:
-            self.file_error = str(error)
-            return
-        self.watch, self._version, self._rest, self.file_error = None, None, 0, ""
+        self.watch, self._version, self._rest = None, None, 0
+        self._choose(name)
         self._forget_changes()
         self._paint()
         self._look()
+
+    def _choose(self, name: str) -> None:
+        """Take the name of a file to show, or say where files are chosen why not."""
+        self.shown = self.file_error = ""
+        try:
+            bare = checked_name(name) if name else ""
+        except InputError as error:
+            self.file_error = str(error)
+            return
+        if bare and not (self.campaigns.folder / bare).exists():
+            self.file_error = f"{bare} is not in this folder: choose a file of the list."
+        else:
+            self.shown = bare
 
     def _forget_changes(self) -> None:
         self.changes = Changes()
@@ -207,35 +217,38 @@ class CampaignSession:
         if self._hindrance():
             return
         name, workers = checked_name(self.proposal.file), self.proposal.workers
+        self._starting = True
         preset = self.proposal.preset()
         self._do(name, "starting …", lambda: self.campaigns.start(name, preset, workers=workers))
 
     def _go_on(self, plan: CampaignPlan | None) -> None:
         """Resume the open campaign, with other numbers if a plan is given."""
         name, workers = self.shown, self.proposal.workers
-        self._do(
-            name,
-            "opening …",
-            lambda: self.campaigns.resume(name, workers=workers, plan=plan),
-        )
+        resume = functools.partial(self.campaigns.resume, workers=workers, plan=plan)
+        self._do(name, "opening …", lambda: resume(name))
 
     def _do(self, name: str, saying: str, what: Callable[[], None]) -> None:
         """Do what may take a moment, off the event loop."""
         self.acting, self.file_error = saying, ""
-        self.actions.request(functools.partial(_done, name, what))
+        self.actions.request(functools.partial(tried, name, what))
 
     def _acted(self, outcome: tuple[str, Exception | None] | Exception) -> None:
         """Show the campaign that was started or went on, or say why it did not."""
         self.acting = ""
         name, error = outcome if isinstance(outcome, tuple) else ("", outcome)
-        if error is not None:
-            self.file_error = _words(error)
+        words = error_words(error, self.campaigns.folder) if error is not None else ""
+        if self._starting:
+            self.start_error = words
         else:
+            self.file_error = words
+        if error is None:
+            if self._starting:
+                self.proposal = self.proposal._replace(named=False)
+                self._rename()
             if name != self.shown:
                 self._show(name)
-                named = self.proposal._replace(named=False)
-                self.proposal = named._replace(file=free_name(named, self.campaigns.folder))
             self._forget_changes()
+        self._starting = False
         self._push()
         self._look()
 
@@ -243,51 +256,54 @@ class CampaignSession:
 
     def _predict(self) -> None:
         """Predict what the new campaign takes, if it makes a plan."""
-        if self.errors_now():
+        if set(self.errors_now()) - {"file"}:
             self.forecast = self.forecast | {"older": True}
             return
         preset, workers = self.proposal.preset(), self.proposal.workers
         self.forecast = self.forecast | {"older": True}
-        self.predictions.request(lambda _report: (preset, forecast(preset, workers=workers)))
+        self.predictions.request(lambda _report: (preset, foreseen(preset, workers=workers)))
 
     def _predicted(self, outcome: tuple[Preset, Forecast] | Exception) -> None:
         if isinstance(outcome, Exception):
-            self.forecast = NO_FORECAST | {"error": _words(outcome)}
+            self.forecast = NO_FORECAST | {"error": error_words(outcome, self.campaigns.folder)}
         else:
             self.forecast = forecast_words(outcome[1])
         self._push()
 
     def errors_now(self) -> dict[str, str]:
         """Why the controls make no plan, by control."""
-        own = {k: v for k, v in self.errors.items() if not k.startswith("more_")}
-        return {**self.proposal.misfits(), **own}
+        return refusals(self.proposal, self.errors, self.campaigns, acting=bool(self.acting))
 
     def _hindrance(self) -> str:
         """Why the new campaign cannot start; empty if it can."""
         if self.acting:
             return self.acting
-        if self.errors_now():
-            return "something above is refused"
-        return "nothing can be computed" if self.forecast.get("error") else ""
-
-    def _shared(self) -> str:
-        """That another campaign of this server would run beside the new one."""
-        names = ", ".join(self.campaigns.running())
-        return f"{names} runs too: they will share the processors." if names else ""
+        if labels := list(map(label_of, self.errors_now())):
+            return f"refused above: {', '.join(labels)}"
+        refused = self.forecast["error"] and not self.forecast.get("older")  # of these numbers
+        return "nothing can be computed" if refused else ""
 
     # ------------------------------------------------------------ the records
 
     def _look(self) -> None:
         """Read the open file if it may hold something new; say how it stands."""
+        if not (self.proposal.named or self.acting):
+            self._rename()
         if self.shown:
             self._rest -= 1
             version = self.campaigns.version(self.shown)
             if not self._reading and version != self._version and self._rest <= 0:
                 self._reading, self._version = True, version
                 name = self.shown
-                self.readings.request(lambda _report: _read(self.campaigns, name))
+                self.readings.request(lambda _report: read_file(self.campaigns, name))
         with self.turn.together():
             self._push()
+
+    def _rename(self) -> None:
+        """Propose another name if a file of the proposed one has come up."""
+        if (self.campaigns.folder / self.proposal.file).exists():
+            name = free_name(self.proposal, self.campaigns.folder)
+            self.proposal = self.proposal._replace(file=name)
 
     def _read(self, outcome: tuple[str, Watch | Exception] | Exception) -> None:
         """Show what was read, or why it cannot be."""
@@ -297,7 +313,7 @@ class CampaignSession:
             self._version = None  # the other file was opened meanwhile
             return
         if isinstance(found, Exception):
-            self.watch, self.file_error = None, _words(found)
+            self.watch, self.file_error = None, error_words(found, self.campaigns.folder)
         else:
             target = found.plan.target
             if self.watch is None and target is not None:
@@ -311,17 +327,12 @@ class CampaignSession:
 
     def _paint(self) -> None:
         """Draw what was read."""
-        self.board.show(
-            self.watch,
-            self._status(),
-            self.choices,
-            LOOKS[self.theme],
-            self.turn.document,
-        )
+        look = LOOKS[self.theme]
+        self.board.show(self.watch, self._status(), self.choices, look, self.turn.document)
 
     def _status(self) -> Status:
         if self.watch is None and self.file_error:
-            return Status(text=self.file_error, failed=True)
+            return Status()  # said where files are chosen
         if self.watch is None and self.shown:
             return self.campaigns.status(self.shown)._replace(text=f"reading {self.shown} …")
         return self.campaigns.status(self.shown) if self.shown else Status()
@@ -338,55 +349,43 @@ class CampaignSession:
 
     def _state(self) -> dict[str, Any]:
         status = self.campaigns.status(self.shown) if self.shown else Status()
-        readable = self.watch is not None and not self.acting
+        refused = any(name.startswith("more_") for name in self.errors)
+        errors, workers = self.errors_now(), self.proposal.workers
+        shared = sharing_words(
+            self.campaigns.running(), workers=workers, busy=self.campaigns.busy()
+        )
         opened = {
             "names": self.campaigns.names(),
             "running": self.campaigns.running(),
             "name": self.shown if self.watch is not None else "",
-            "text": self.acting or (f"{self.shown}: {state_words(self.watch, status)}"),
+            "text": self.acting,
+            "touched": refused or self.changes != Changes(),
             "error": self.file_error,
-            "can_pause": status.running and not status.stopping,
-            "can_resume": readable and not status.running,
-            "can_more": readable
-            and self.changes != Changes()
-            and not any(name.startswith("more_") for name in self.errors),
+            **standing(self.watch, status, self.changes, refused=refused, acting=bool(self.acting)),
         }
         page = {
             "sentence": f"of the preset “{self.proposal.base.title}”",
             "theme": self.theme,
             "focus": self.focus,
             "file": self.shown if self.watch is not None else "",
-            "error": "",
+            "error": self.note,
         }
         state = column_state(
             self.proposal,
             plan=self.watch.plan if self.watch is not None else None,
             changes=self.changes,
-            errors={**self.errors, **self.errors_now()},
+            errors={**self.errors, **errors},
             page=page,
             opened=opened,
-            forecast={"older": False, **self.forecast, "shared": self._shared()},
+            forecast={
+                "older": False,
+                **self.forecast,
+                "shared": shared,
+                "failed": self.start_error,
+            },
             start=self._hindrance(),
         )
+        if "workers" not in errors:
+            fields = state["fields"]
+            fields["workers"]["caution"] = worker_caution(workers, self.forecast["peak"])
         return {**state, "answered": self._answered}
-
-
-def _read(campaigns: Campaigns, name: str) -> tuple[str, Watch | Exception]:
-    """What a results file holds, or why it cannot be read."""
-    try:
-        return name, campaigns.watch(name)
-    except Exception as error:  # noqa: BLE001 (shown in the page: nobody else would hear it)
-        return name, error
-
-
-def _done(name: str, what: Callable[[], None], _report: object) -> tuple[str, Exception | None]:
-    """Whether something could be done with a results file."""
-    try:
-        what()
-    except Exception as error:  # noqa: BLE001 (shown in the page: nobody else would hear it)
-        return name, error
-    return name, None
-
-
-def _words(error: Exception) -> str:
-    return str(error) if isinstance(error, InputError) else f"{type(error).__name__}: {error}"

@@ -7,6 +7,7 @@ Its thread alone writes the file; pages read it through a connection of their ow
 from __future__ import annotations
 
 import contextlib
+import re
 import threading
 import time
 from collections import defaultdict
@@ -25,11 +26,50 @@ from lozenge_engine.plan import CampaignPlan
 from lozenge_engine.presets import Preset
 from lozenge_engine.workers import Processes
 
-__all__ = ["Campaigns", "Status", "Watch"]
+__all__ = ["LONGEST_NAME", "SUFFIX", "Campaigns", "Status", "Watch", "checked_name"]
 
 SUFFIX = ".sqlite"
+LONGEST_NAME = 100
 END_PATIENCE = 3.0
 """Seconds that a campaign is given to end by itself when the server ends."""
+
+
+def checked_name(text: object) -> str:
+    """A bare file name with the suffix of results files.
+
+    Parameters
+    ----------
+    text : object
+        What was typed.
+
+    Returns
+    -------
+    str
+        The name.
+
+    Raises
+    ------
+    InputError
+        If it is no bare name: results files lie in the folder where the server was started.
+    """
+    name = text.strip() if isinstance(text, str) else ""
+    if not name:
+        raise refuse("results file", given="nothing", allowed="a file name", do="type one")
+    if len(name) > LONGEST_NAME:
+        raise refuse(
+            "results file",
+            given=f"a name of {len(name)} characters",
+            allowed=f"up to {LONGEST_NAME}",
+            do="shorten it",
+        )
+    if name.startswith(".") or re.search(r"[/\\:\x00-\x1f]", name):
+        raise refuse(
+            "results file",
+            given=name,
+            allowed="a name without a folder, in the folder where the server was started",
+            do="leave out slashes, colons and a dot at the start",
+        )
+    return name if name.endswith(SUFFIX) else name + SUFFIX
 
 
 class Status(NamedTuple):
@@ -104,7 +144,7 @@ class _Run:
     def __init__(self, opened: Callable[[], store.Results], *, workers: int) -> None:
         self.status = Status(running=True)
         self._opened = opened
-        self._workers = workers
+        self.workers = workers
         self._ready: Future[None] = Future()
         self._stop = threading.Event()
         self._plan: CampaignPlan | None = None
@@ -157,13 +197,13 @@ class _Run:
 
     def _go(self, results: store.Results) -> str:
         """Run until there is no further plan to follow; says how it ended."""
-        executor = Processes(self._workers)
+        executor = Processes(self.workers)
         try:
             while True:
                 ending = campaign.run(
                     results,
                     executor=executor,
-                    capacity=self._workers,
+                    capacity=self.workers,
                     report=self._report,
                     stop=self._stop,
                 )
@@ -213,6 +253,21 @@ class Campaigns:
         """Those that run here, the latest first."""
         with self._lock:
             return [name for name, run in reversed(self._runs.items()) if run.status.running]
+
+    def busy(self) -> int:
+        """Workers of all that run here."""
+        with self._lock:
+            return sum(run.workers for run in self._runs.values() if run.status.running)
+
+    def check_new(self, name: str) -> None:
+        """Refuse the name of a file that exists."""
+        if (self.folder / name).exists():
+            raise refuse(
+                "results file",
+                given=f"{name}, which exists",
+                allowed="a new name",
+                do="type another name, or open that file at the top",
+            )
 
     def status(self, name: str) -> Status:
         """How one stands with this server."""
@@ -270,13 +325,7 @@ class Campaigns:
             If the file cannot be made, exists already or runs.
         """
         path = self.folder / name
-        if path.exists():
-            raise refuse(
-                "results file",
-                given=f"{name}, which exists",
-                allowed="a new name",
-                do="type another name, or open the file above",
-            )
+        self.check_new(name)
 
         def opened() -> store.Results:
             rows = forecast(preset, workers=workers).rows

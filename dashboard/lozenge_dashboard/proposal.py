@@ -7,39 +7,46 @@ import re
 from collections.abc import Callable, Mapping
 from dataclasses import replace
 from pathlib import Path
+from types import MappingProxyType
 from typing import Literal, NamedTuple, get_args
 
 import numpy as np
 
+from lozenge_dashboard.campaigns import LONGEST_NAME, SUFFIX, checked_name
 from lozenge_dashboard.exchange import file_name
-from lozenge_engine.config import Setup
+from lozenge_engine.config import MAX_ELEMENTS, Setup
 from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.geometry import MAX_REGIONS, largest_separation
-from lozenge_engine.placement import largest_mean_gap
+from lozenge_engine.geometry import MAX_REGIONS, PATCH_AREA, check_regions, largest_separation
+from lozenge_engine.placement import largest_mean_gap, scaled
 from lozenge_engine.plan import Axis, AxisName, CampaignPlan, Quantity, Target
 from lozenge_engine.presets import Preset
 from lozenge_engine.workers import MAX_WORKERS
 
 __all__ = [
     "PROPOSED_AXES",
-    "SUFFIX",
     "WANTED",
     "Ladder",
     "Proposal",
     "ProposedAxis",
     "Wanted",
-    "checked_name",
+    "checked_end",
     "free_name",
+    "shown",
     "suggest",
 ]
-
-SUFFIX = ".sqlite"
-LONGEST_NAME = 100
 
 ProposedAxis = Literal["density", "half_width", "separation", "preset"]
 Wanted = Literal["slope", "entropy", "mutual_information", "count"]
 PROPOSED_AXES: tuple[ProposedAxis, ...] = get_args(ProposedAxis)
 WANTED: tuple[Wanted, ...] = get_args(Wanted)
+ENDS: Mapping[str, tuple[float, float, str]] = MappingProxyType(
+    {
+        "density": (1.0, MAX_ELEMENTS / PATCH_AREA, "a number from 1 to 500 000 per area"),
+        "half_width": (1e-9, 1.0, "a number above 0, at most 1"),
+        "separation": (0.0, 2.0, "a number from 0 to 2"),
+    }
+)
+"""What the ends of each axis may be."""
 
 
 class Ladder(NamedTuple):
@@ -61,9 +68,9 @@ class Ladder(NamedTuple):
             return (self.low,)
         if not (0.0 if even else 1e-12) <= self.low < self.high:
             raise refuse(
-                "ends of the axis",
-                given=f"{self.low:g} to {self.high:g}",
-                allowed="a lower end from 0 on, below the upper end",
+                "from",
+                given=f"{self.low:.12g}, and {self.high:.12g} in “to”",
+                allowed="a smaller number than in “to”",
                 do="change one of them",
             )
         make = np.linspace if even else np.geomspace
@@ -149,9 +156,9 @@ class Proposal(NamedTuple):
         if self.wanted == "slope" and not {"density", "half_width"} & set(names):
             raise refuse(
                 "wanted",
-                given=f"the slope b along {', '.join(names)}",
+                given=f"slope b along {', '.join(names).replace('_', ' ')}",
                 allowed="a density or half-width axis for b",
-                do="want S or I at each point, or change the axis",
+                do="choose S or I at each point, or change the axis",
             )
         counts = [k for axis in self.axes() if axis.name == "region_count" for k in axis.values]
         if self.wanted == "mutual_information" and 1 in (
@@ -159,10 +166,31 @@ class Proposal(NamedTuple):
         ):
             raise refuse(
                 "wanted",
-                given="mutual information of one region",
-                allowed="two regions or more",
-                do="want S, or change the regions",
+                given="I at each point, with one region",
+                allowed="I of two regions or more",
+                do="choose S at each point, or change the regions",
             )
+
+    def _check_placements(self) -> None:
+        """Refuse shifts none of which leaves the regions in the patch."""
+        regions = self.base.setup.regions()
+        ladder = self.ladder
+        if self.axis == "half_width" and ladder is not None:
+            try:
+                regions = scaled(regions, ladder.low / min(region.half_width for region in regions))
+            except InputError:
+                return  # a point that is left out
+        elif self.axis != "density" or self.counts.strip():
+            return
+        first = ""
+        for t, x in self.placements:
+            try:
+                check_regions(tuple(replace(r, t0=r.t0 + t, x0=r.x0 + x) for r in regions))
+            except InputError as error:
+                first = first or f"shift t {t:g}, shift x {x:g}, {error}"
+            else:
+                return
+        raise InputError(first.replace("half_width", "half-width"))
 
     def preset(self) -> Preset:
         """The preset with this campaign.
@@ -184,23 +212,30 @@ class Proposal(NamedTuple):
 
     def misfits(self) -> dict[str, str]:
         """Why the values do not make a plan, by control; empty if they do."""
-        parts: tuple[tuple[str, Callable[[], object]], ...] = (
-            ("low", self.axes),
-            ("counts", lambda: _counts(self.counts)),
+        parts: list[tuple[str, Callable[[], object]]] = [
             ("percent" if self.relative else "absolute", self.target),
             ("wanted", self._check_wanted),
             ("file", lambda: checked_name(self.file)),
-        )
+            ("placements", self._check_placements),
+        ]
+        ladder = self.ladder
+        if ladder is not None:
+            parts = [
+                ("low", lambda: checked_end("low", ladder.low, axis=self.axis)),
+                ("high", lambda: checked_end("high", ladder.high, axis=self.axis)),
+                ("low", lambda: ladder.values(even=self.axis == "separation")),
+                ("counts", lambda: _counts(self.counts)),
+                *parts,
+            ]
         found: dict[str, str] = {}
         for name, part in parts:
             try:
                 part()
             except InputError as error:
-                found[name] = str(error)
-        if "counts" in found:
-            found.pop("low", None)
-        if "low" in found or "counts" in found:
+                found.setdefault(name, str(error))
+        if {"low", "high", "counts"} & set(found):
             found.pop("wanted", None)
+            found.pop("placements", None)
         if not found:
             try:
                 self.preset()
@@ -208,6 +243,48 @@ class Proposal(NamedTuple):
                 place = str(error).partition(":")[0].split()[0]
                 found[_PLACES.get(place, "low")] = str(error)
         return found
+
+
+def shown(value: object) -> str:
+    """A refused value as it stands in its box."""
+    if isinstance(value, float):
+        return f"{value:.12g}"
+    text = str(value).strip()
+    return (text if len(text) <= 60 else f"{text[:57]} …") or "nothing"
+
+
+def checked_end(name: Literal["low", "high"], value: object, *, axis: str) -> float:
+    """An end of an axis.
+
+    Parameters
+    ----------
+    name : {"low", "high"}
+        Which.
+    value : object
+        What was typed.
+    axis : str
+        Of the axes that have ends.
+
+    Returns
+    -------
+    float
+        The end.
+
+    Raises
+    ------
+    InputError
+        If it is no number that the axis can have.
+    """
+    low, high, allowed = ENDS[axis]
+    number = isinstance(value, int | float) and not isinstance(value, bool)
+    if not (number and low <= value <= high):  # type: ignore[operator]
+        raise refuse(
+            {"low": "from", "high": "to"}[name],
+            given=shown(value),
+            allowed=allowed,
+            do="type such a number",
+        )
+    return float(value)  # type: ignore[arg-type]
 
 
 _PLACES = {
@@ -225,7 +302,7 @@ def _counts(text: str) -> tuple[int, ...]:
     if not all(part.isdecimal() and 1 <= int(part) <= MAX_REGIONS for part in parts):
         raise refuse(
             "region counts",
-            given=text,
+            given=shown(text),
             allowed=f"whole numbers from 1 to {MAX_REGIONS}, or nothing",
             do="write them as 1, 2, 3",
         )
@@ -305,33 +382,3 @@ def free_name(proposal: Proposal, folder: Path) -> str:
         k += 1
         name = f"{stem}{axis}-{k}{SUFFIX}"
     return name
-
-
-def checked_name(text: object) -> str:
-    """A bare file name with the suffix of results files.
-
-    Parameters
-    ----------
-    text : object
-        What was typed.
-
-    Returns
-    -------
-    str
-        The name.
-
-    Raises
-    ------
-    InputError
-        If it is no bare name: results files lie in the folder where the server was started.
-    """
-    name = text.strip() if isinstance(text, str) else ""
-    bare = name and not name.startswith(".") and not re.search(r"[/\\:\x00-\x1f]", name)
-    if not bare or len(name) > LONGEST_NAME:
-        raise refuse(
-            "results file",
-            given=text,
-            allowed="a name without a folder, in the folder where the server was started",
-            do="leave out slashes and colons",
-        )
-    return name if name.endswith(SUFFIX) else name + SUFFIX

@@ -301,8 +301,12 @@ class _Run:
         target = self.layout.plan.target
         if target is None:
             return ""
-        unit = "of the value" if target.relative else "nats"
-        return f"error {self.round.error:.3g} {unit}, wanted {target.error:.3g}"
+        if not math.isfinite(self.round.error):
+            return "its error is not known"
+        if target.relative:
+            reached, wanted = 100 * self.round.error, 100 * target.error
+            return f"error {reached:.3g} % of the value, wanted {wanted:g} %"
+        return f"error {self.round.error:.3g} nats, wanted {target.error:g} nats"
 
     def _tell(self) -> None:
         if self.report is None:

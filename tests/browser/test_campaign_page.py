@@ -207,6 +207,50 @@ def test_refusals_stand_at_their_control(campaign: Page, folder: Path) -> None:
     assert not (folder / "fine.sqlite").exists()
 
 
+def test_name_of_an_existing_file_is_refused_while_it_is_typed(
+    campaign: Page, folder: Path
+) -> None:
+    (folder / "taken.sqlite").write_bytes(b"mine")
+    box, button = campaign.locator("#file-box"), campaign.get_by_role("button", name="Start")
+    box.fill("taken")  # the box keeps the focus
+    campaign.locator("#file-error", has_text="taken.sqlite, which exists").wait_for()
+    bar = campaign.get_by_label("Start the new campaign")
+    bar.get_by_text("refused above: results file").wait_for()
+    assert button.is_disabled()
+    assert box.input_value() == "taken"
+    box.fill("taken2")
+    campaign.locator("#file-error").wait_for(state="hidden")
+    assert button.is_enabled()
+    (folder / "taken.sqlite").unlink()
+
+
+def test_missing_file_is_said_once_and_by_its_bare_name(page: Page, address: str) -> None:
+    opened(page, f"{address}campaign?file=nosuch.sqlite")
+    page.wait_for_timeout(500)
+    assert page.get_by_text("nosuch.sqlite").count() == 1
+    refusal = page.get_by_label("Results file", exact=True).get_by_role("alert")
+    assert refusal.inner_text() == "nosuch.sqlite is not in this folder: choose a file of the list."
+
+
+def test_finished_campaign_is_not_offered_to_resume(campaign: Page) -> None:
+    start(campaign, "whole", realisations=3)
+    said(campaign, "all 12 realisations")
+    section = campaign.get_by_label("Results file", exact=True)
+    section.get_by_text("type a larger number").wait_for()
+    assert campaign.get_by_role("button", name="Resume").is_disabled()
+    more = campaign.get_by_role("button", name="More realisations")
+    for control, value in (("more_minutes", 0), ("more_realisations", 2)):
+        type_into(campaign, control, value)
+        campaign.locator(f"#{control}-error").wait_for()
+        assert more.is_disabled()
+    type_into(campaign, "more_realisations", 4)
+    campaign.locator("#more_realisations-error").wait_for(state="hidden")
+    assert more.is_disabled()  # the budget is still refused
+    type_into(campaign, "more_minutes", 5)
+    campaign.locator("#more_minutes-error").wait_for(state="hidden")
+    assert more.is_enabled()
+
+
 def test_foreign_file_is_refused_in_place_and_kept(campaign: Page, folder: Path) -> None:
     foreign = folder / "foreign.sqlite"
     foreign.write_bytes(b"nothing of ours " * 200)
@@ -248,6 +292,13 @@ def test_no_error_reaches_the_console(page: Page, address: str) -> None:
 def test_nothing_is_wider_than_the_page(page: Page, address: str, width: int, height: int) -> None:
     page.set_viewport_size({"width": width, "height": height})
     opened(page, f"{address}campaign")
+    # The button is in sight before anything is scrolled, and its target large enough to hit.
+    button = page.get_by_role("button", name="Start").bounding_box()
+    assert button is not None
+    assert button["y"] + button["height"] <= height
+    remove = page.get_by_role("button", name="remove placement 1").bounding_box()
+    assert remove is not None
+    assert min(remove["width"], remove["height"]) >= 24
     start(page, f"wide-{width}", realisations=2)
     said(page, "all 8 realisations")
     page.wait_for_timeout(500)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import threading
 import time
 from collections.abc import Callable, Iterator
@@ -14,14 +15,26 @@ from typing import Any
 import holoviews as hv
 import numpy as np
 import pytest
+from bokeh.document import Document
+from panel.io.state import set_curdoc
 
-from lozenge_dashboard.campaign_column import Changes, column_state, forecast_words
+from lozenge_dashboard import campaign_board
+from lozenge_dashboard.campaign_board import (
+    Asked,
+    error_words,
+    forecast_words,
+    foreseen,
+    sharing_words,
+    worker_caution,
+)
+from lozenge_dashboard.campaign_column import Changes, column_state
+from lozenge_dashboard.campaign_session import CampaignSession
 from lozenge_dashboard.campaign_text import columns, line_html, rows, words_html
-from lozenge_dashboard.campaigns import Campaigns, Status, Watch
+from lozenge_dashboard.campaigns import Campaigns, Status, Watch, checked_name
 from lozenge_dashboard.palette import DARK, LIGHT, MARKERS
-from lozenge_dashboard.proposal import Proposal, checked_name, free_name, suggest
+from lozenge_dashboard.proposal import Proposal, free_name, suggest
 from lozenge_dashboard.records import CampaignChoices
-from lozenge_dashboard.typed import put
+from lozenge_dashboard.typed import idle, put, put_more, refusals, standing
 from lozenge_dashboard.views.campaign import Curve, caution, curves, read
 from lozenge_dashboard.views.catalogue import Figure
 from lozenge_dashboard.views.effort import (
@@ -175,7 +188,6 @@ def test_region_counts_are_a_second_axis() -> None:
     ("name", "value", "place"),
     [
         ("counts", "two", "counts"),
-        ("low", 9e5, "low"),
         ("low", 5e4, "low"),
         ("placements", [[0, 0], [0, 0]], "placements"),
         ("wanted", "mutual_information", "wanted"),
@@ -202,6 +214,9 @@ def test_slope_along_separation_is_refused_at_what_is_wanted() -> None:
         ("minutes", "soon"),
         ("workers", 0),
         ("low", "low"),
+        ("low", 9e5),
+        ("high", 0),
+        ("minutes", 0),
         ("axis", "colour"),
         ("placements", [["here", 0]]),
         ("placements", [[math.inf, 0]]),
@@ -237,6 +252,58 @@ def test_proposed_name_is_free(tmp_path: Path) -> None:
     assert free_name(proposal, tmp_path) != proposal.file
 
 
+def said(name: str, value: object, proposal: Proposal | None = None) -> str:
+    """The refusal of a value."""
+    with pytest.raises(InputError) as refusal:
+        put(proposal or proposed("two-equal-regions"), name, value)
+    return str(refusal.value)
+
+
+def test_refusals_have_the_labels_and_units_of_the_screen() -> None:
+    widths = put(proposed("two-equal-regions"), "axis", "half_width")
+    assert said("low", -5).startswith("from: given -5; allowed is a number from 1 to 500 000")
+    assert said("low", -5, widths).startswith("from: given -5; allowed is a number above 0")
+    assert said("high", "abc").startswith("to: given abc; allowed is a number")
+    assert said("points", 0).startswith("values: given 0; allowed is a whole number")
+    assert "0.0001 to 1000 %" in said("percent", -2)
+    assert "error to reach" in said("percent", -2)
+    assert "of minutes" in said("minutes", 0)
+    assert said("file", " ").startswith("results file: given nothing; allowed is a file name")
+
+
+def test_ends_the_wrong_way_round_name_both_controls() -> None:
+    refusal = put(proposed(), "low", 5e4).misfits()["low"]
+    assert refusal.startswith("from: given 50000, and")
+    assert "“to”" in refusal
+
+
+@pytest.mark.parametrize("axis", ["density", "half_width"])
+def test_shift_that_fits_nowhere_is_refused_once_and_whole(axis: str) -> None:
+    proposal = put(put(proposed("two-equal-regions"), "axis", axis), "placements", [[0.9, 0]])
+    refusal = proposal.misfits()["placements"]
+    assert refusal.startswith("shift t 0.9, shift x 0, region")
+    assert refusal.count("given") == refusal.count("allowed is") == 1
+    assert "..." not in refusal
+    assert "half_width" not in refusal
+    assert put(proposal, "placements", [[0.9, 0], [0, 0]]).misfits() == {}
+
+
+def test_count_of_the_preset_axis_is_not_asked_for() -> None:
+    base = replace(shipped()["nested-diamond"], campaign=preset().campaign)
+    own = suggest(base, cores=2, folder=Path("/no"))
+    assert put(own, "counts", "many").misfits() == {}
+
+
+def test_name_of_a_file_that_exists_is_refused_before_the_start(tmp_path: Path) -> None:
+    server, proposal = Campaigns(tmp_path), put(proposed(), "file", "mine")
+    assert refusals(proposal, {}, server, acting=False) == {}
+    (tmp_path / "mine.sqlite").touch()
+    found = refusals(proposal, {"more_error": "no", "low": "no"}, server, acting=False)
+    assert list(found) == ["low", "file"]
+    assert "mine.sqlite, which exists" in found["file"]
+    assert refusals(proposal, {}, server, acting=True) == {}
+
+
 # ---------------------------------------------------------------- what the column shows
 
 
@@ -269,6 +336,23 @@ def test_one_region_closes_the_axis_of_separation() -> None:
     assert "one region" in state_of(proposed())["fields"]["axis"]["closed"]["separation"]
 
 
+def test_density_axis_shows_elements_values_and_spacing() -> None:
+    fields = state_of(put(put(proposed(), "low", 200), "high", 1600))["fields"]
+    assert "N = 2 × density: 400 to 3\u202f200" in fields["high"]["note"]
+    assert fields["points"]["note"].startswith("200, ")
+    assert "in the logarithm" in fields["points"]["note"]
+    for word in re.findall(r"[\d.]+", fields["points"]["note"]):
+        assert len(word.replace(".", "")) <= 4
+    many = state_of(put(proposed(), "points", 60))["fields"]["points"]["note"]
+    assert many.count(",") == 7
+
+
+def test_half_width_axis_says_what_scales_along() -> None:
+    fields = state_of(put(proposed("two-equal-regions"), "axis", "half_width"))["fields"]
+    assert "Sizes and gaps scale together" in fields["axis"]["note"]
+    assert fields["high"]["note"] == ""
+
+
 def test_changes_of_the_open_campaign_keep_its_identity() -> None:
     plan = preset(target=Target(quantity="slope", error=0.02, relative=True)).campaign
     assert plan is not None
@@ -286,6 +370,172 @@ def test_prediction_says_time_memory_and_what_is_left_out() -> None:
     assert "with 2 workers" in said["text"]
     assert "MB" in said["text"]
     assert len(said["left_out"]) == 1
+
+
+@pytest.fixture
+def two_cores(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(campaign_board, "cores", lambda: 2)
+
+
+def test_workers_beyond_the_cores_save_no_time_and_take_memory(two_cores: None) -> None:
+    few, many = (foreseen(preset(TWO), workers=n) for n in (2, 9))
+    assert (few.workers, many.workers) == (2, 9)
+    assert many.seconds == few.seconds < foreseen(preset(TWO), workers=1).seconds
+    assert many.peak_bytes == pytest.approx(forecast(preset(TWO), workers=9).peak_bytes)
+    assert "with 9 workers on 2 cores" in forecast_words(many)["text"]
+    assert "cores" not in forecast_words(few)["text"]
+
+
+def test_workers_are_cautioned_against_this_machine(two_cores: None) -> None:
+    assert worker_caution(2, 1e9, memory=2e9) == ""
+    assert worker_caution(3, 1e9, memory=2e9) == "2 cores here: more workers are not faster"
+    assert "3.0 GB of memory predicted, 2.0 GB here" in worker_caution(2, 3e9, memory=2e9)
+    assert "memory" in worker_caution(2, 1e18)
+
+
+def test_cost_of_campaigns_side_by_side_is_said(two_cores: None) -> None:
+    assert sharing_words([], workers=2, busy=0) == ""
+    assert "2 times as long" in sharing_words(["a.sqlite"], workers=2, busy=2)
+    assert "1.5 times as long" in sharing_words(["a.sqlite"], workers=1, busy=2)
+    assert "on other cores" in sharing_words(["a.sqlite"], workers=1, busy=1)
+
+
+def test_errors_lose_the_folder_and_what_is_said_twice(tmp_path: Path) -> None:
+    assert error_words(InputError(f"{tmp_path}/a.sqlite: given x"), tmp_path) == "a.sqlite: given x"
+    inner = "half_width 0.5: region A: given out; allowed is in; move it."
+    wrapped = f"axes: given {inner}; allowed is at least one point that fits; change the axes."
+    assert error_words(InputError(wrapped), tmp_path) == inner.replace("half_width", "half-width")
+    assert error_words(OSError("full"), tmp_path) == "OSError: full"
+
+
+# ---------------------------------------------------------------- the open campaign
+
+
+@pytest.mark.parametrize("value", [0, -1, math.nan, "soon", True])
+def test_budget_of_nothing_is_refused_for_the_open_campaign(ladder: Watch, value: object) -> None:
+    with pytest.raises(InputError, match=r"budget, this file: .* number of minutes from 1/60"):
+        put_more(Changes(), "minutes", value, ladder)
+
+
+def test_budget_that_is_used_already_is_refused(ladder: Watch) -> None:
+    used = ladder._replace(elapsed=600.0)
+    with pytest.raises(InputError, match="used already"):
+        put_more(Changes(), "minutes", 10, used)
+    assert put_more(Changes(), "minutes", 11, used) == Changes(minutes=11)
+    assert put_more(Changes(minutes=11), "minutes", "", used) == Changes()
+
+
+def test_fewer_realisations_than_there_are_refused(ladder: Watch) -> None:
+    # Five, and two failed ones of the first sprinkling.
+    for value in (6, 7):
+        with pytest.raises(InputError, match="7 realisations of a sprinkling are there already"):
+            put_more(Changes(), "realisations", value, ladder)
+    with pytest.raises(InputError, match="whole number"):
+        put_more(Changes(), "realisations", 8.5, ladder)
+    assert put_more(Changes(), "realisations", 8, ladder) == Changes(realisations=8)
+    assert put_more(Changes(realisations=8), "realisations", 5, ladder) == Changes()
+
+
+def test_error_of_the_open_campaign_is_in_the_units_typed(ladder: Watch) -> None:
+    assert put_more(Changes(), "error", 3, ladder) == Changes(error=3)
+    assert put_more(Changes(error=3), "error", 50, ladder) == Changes()
+    with pytest.raises(InputError, match=r"error to reach, this file: given 0; .* 1000 %"):
+        put_more(Changes(), "error", 0, ladder)
+
+
+def test_campaign_with_nothing_left_to_do_says_why(ladder: Watch, lonely: Watch) -> None:
+    assert "type a larger number" in idle(lonely, lonely.plan)
+    assert idle(lonely, replace(lonely.plan, realisations=2)) == ""
+    more = replace(ladder.plan, realisations=100)
+    near = ladder._replace(estimates=ladder.estimates._replace(error=0.4))
+    # Few realisations may come close by chance: the pilot goes on.
+    assert idle(near, more) == ""
+    piloted = near._replace(counts=((40, 0),) * 4)
+    assert idle(piloted, more) == "target reached: ask for a smaller error"
+    smaller = replace(more, target=Target(quantity="slope", error=0.3, relative=True))
+    assert idle(piloted, smaller) == ""
+    assert "used up" in idle(piloted._replace(elapsed=60.0), replace(smaller, budget=60.0))
+
+
+def test_buttons_of_the_open_campaign(lonely: Watch) -> None:
+    def of(status: Status | None = None, **changed: Any) -> dict[str, Any]:
+        given = {"changes": Changes(), "refused": False, "acting": False} | changed
+        return standing(lonely, status or Status(), **given)
+
+    done = of()
+    assert (done["can_pause"], done["can_resume"], done["can_more"]) == (False, False, False)
+    assert "larger number" in done["why_resume"]
+    assert "type another number" in done["why_more"]
+    typed = of(changes=Changes(realisations=3))
+    assert (typed["can_resume"], typed["can_more"]) == (True, True)
+    assert "refused" in of(changes=Changes(realisations=3), refused=True)["why_more"]
+    running = of(Status(running=True), changes=Changes(realisations=3))
+    assert (running["can_pause"], running["can_resume"], running["can_more"]) == (True, False, True)
+    assert not of(Status(running=True, stopping=True))["can_pause"]
+    assert not of(changes=Changes(realisations=3), acting=True)["can_more"]
+
+
+# ---------------------------------------------------------------- a page
+
+
+def page_of(folder: Path, *, file: str = "", note: str = "") -> CampaignSession:
+    """A page's session without a browser."""
+    with set_curdoc(Document()):
+        base = replace(shipped()["nested-diamond"], campaign=None)
+        return CampaignSession(Campaigns(folder), Asked(base, file, "light", note))
+
+
+def column_of(session: CampaignSession) -> dict[str, Any]:
+    state = session.board.controls.state
+    assert state is not None
+    return dict(state)
+
+
+def typed(session: CampaignSession, name: str, value: object) -> dict[str, Any]:
+    """What the column shows once a value was typed."""
+    session.receive({"kind": "set", "name": name, "value": value, "id": 1})
+    return column_of(session)
+
+
+def test_refusal_of_the_start_stands_at_the_button_until_something_changes(tmp_path: Path) -> None:
+    session = page_of(tmp_path)
+    session.receive({"kind": "act", "name": "start", "id": 1})
+    session.actions.close()
+    session._acted(("a.sqlite", InputError(f"{tmp_path}/a.sqlite: given a full disk")))
+    state = column_of(session)
+    assert state["forecast"]["failed"] == "a.sqlite: given a full disk"
+    assert state["open"]["error"] == ""
+    assert typed(session, "realisations", 7)["forecast"]["failed"] == ""
+    session.close()
+    session.campaigns.close()
+
+
+def test_start_names_the_fields_that_are_refused(tmp_path: Path) -> None:
+    session = page_of(tmp_path)
+    assert column_of(session)["start"] == ""
+    typed(session, "low", -5)
+    assert typed(session, "minutes", 0)["start"] == "refused above: from, budget"
+    # What is refused in a box that is hidden now hinders nothing.
+    typed(session, "minutes", 5)
+    typed(session, "low", 100)
+    assert typed(session, "percent", -1)["start"] == "refused above: error to reach"
+    assert typed(session, "wanted", "count")["start"] == ""
+    session.close()
+
+
+@pytest.mark.parametrize("name", ["nosuch.sqlite", "../up.sqlite"])
+def test_file_of_the_address_that_cannot_be_shown_is_said_at_the_list(
+    tmp_path: Path, name: str
+) -> None:
+    (tmp_path / "here").mkdir()
+    (tmp_path / "up.sqlite").touch()
+    session = page_of(tmp_path / "here", file=name, note="unknown")
+    state = column_of(session)
+    assert name in state["open"]["error"]
+    assert str(tmp_path) not in state["open"]["error"]
+    assert (session.shown, state["open"]["name"]) == ("", "")
+    assert state["page"]["error"] == "unknown"
+    session.close()
 
 
 # ---------------------------------------------------------------- what runs
@@ -342,6 +592,15 @@ def test_more_realisations_are_taken_while_it_runs_and_after(campaigns: Campaign
     campaigns.resume("a.sqlite", workers=1, plan=replace(plan, realisations=33))
     until(lambda: not campaigns.status("a.sqlite").running)
     assert campaigns.watch("a.sqlite").counts == ((33, 0),) * 4
+
+
+def test_workers_that_run_are_counted(campaigns: Campaigns) -> None:
+    assert campaigns.busy() == 0
+    campaigns.start("a.sqlite", preset(realisations=3000), workers=1)
+    assert campaigns.busy() == 1
+    campaigns.pause("a.sqlite")
+    until(lambda: not campaigns.status("a.sqlite").running)
+    assert campaigns.busy() == 0
 
 
 def test_existing_file_is_not_started_again(campaigns: Campaigns, tmp_path: Path) -> None:

@@ -10,6 +10,7 @@ import pytest
 from numpy.typing import NDArray
 from scipy import stats
 
+from lozenge_engine.kernels import gls
 from lozenge_engine.kernels.gls import (
     Bootstrap,
     Group,
@@ -23,6 +24,7 @@ from lozenge_engine.kernels.gls import (
     report,
     slope_weights,
 )
+from lozenge_engine.notation import decimals_for, with_error
 
 FloatArray = NDArray[np.float64]
 ELEMENTS = np.array([80.0, 110.0, 150.0, 210.0, 290.0, 400.0])
@@ -494,10 +496,28 @@ def test_a_report_tells_what_belongs_beside_the_slope() -> None:
     groups[2].samples[3] = np.nan
     text = reported(groups).explain()
     found = fitted(groups)
-    for part in (f"{found.low:.4f} to {found.high:.4f}", "6 cells", "at least 49", "chi2/dof"):
+    digits = decimals_for(found.slope_error)
+    for part in (
+        f"b = {with_error(found.slope, found.slope_error)}",
+        f"{found.low:.{digits}f} to {found.high:.{digits}f}",
+        "6 cells (points in placement classes)",
+        "at least 49",
+        "chi2/dof",
+    ):
         assert part in text
     assert "1 realisation without a number is left out" in text
     assert "AICc" in text
+
+
+@pytest.mark.parametrize("model", LAWS)
+def test_a_report_says_when_another_law_is_better(model: str) -> None:
+    found = reported(exact_ladder(LAWS[model], count=1000))
+    text = found.explain()
+    assert f"Laws by AICc (0 is best): {gls.LAWS[found.models[0].model]}: 0.0; " in text
+    assert text.count("x = ln(l/a)") == 1
+    behind = found.fit.aicc - found.models[0].aicc
+    said = f"The logarithmic law is not the best one, by {behind:.1f}."
+    assert (said in text) == (model != "log")
 
 
 # ---------------------------------------------------------------- edge cases

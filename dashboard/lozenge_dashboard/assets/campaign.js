@@ -1,9 +1,24 @@
 // The control column of the campaign page. The server puts fields.js before this text.
 
 class TextField extends NumberField { // a line of text
+  build() {
+    const node = super.build();
+    if (this.spec.name === "file") this.box.addEventListener("input", () => this.send(this.box.value, false));
+    this.box.addEventListener("blur", () => this.showEnd());
+    return node;
+  }
+
   typed() {
     this.dirty = false;
     this.send(this.box.value, true);
+  }
+
+  showEnd() { this.box.scrollLeft = this.box.scrollWidth; } // names differ there
+
+  update(state) {
+    super.update(state);
+    this.box.title = this.box.value;
+    if (!this.box.matches(":focus")) requestAnimationFrame(() => { if (!this.box.matches(":focus")) this.showEnd(); });
   }
 }
 
@@ -42,7 +57,7 @@ class PlacementsField extends Field {
   update(state) {
     super.update(state);
     const root = this.node.getRootNode();
-    if (state.error || (this.dirty && this.body.contains(root.activeElement))) return;
+    if (this.dirty && this.body.contains(root.activeElement)) return;
     const text = JSON.stringify(state.value);
     if (text === this.text) return;
     this.text = text;
@@ -86,9 +101,14 @@ function updateHead(parts, page) {
   }
 }
 
-const OFF = {
-  pause: "It does not run on this server.", resume: "It runs already.", more: "Type another number above first.",
-};
+const SUFFIX = ".sqlite";
+const LONGEST = 22; // characters of a name that the list shows
+
+// A name short enough for the list; the middle goes, since names differ at the end.
+function cut(name, longest) {
+  const bare = name.endsWith(SUFFIX) ? name.slice(0, -SUFFIX.length) : name;
+  return bare.length <= longest ? bare : `${bare.slice(0, 4)}…${bare.slice(5 - longest)}`;
+}
 
 // The results file that is shown: chosen from the folder's, run, paused, changed.
 function opened(act, fields, sender, specs) {
@@ -99,6 +119,7 @@ function opened(act, fields, sender, specs) {
     error: make("p", { class: "refusal", role: "alert" }),
     pause: button("Pause", "Stops after what is recorded; it goes on later without losing a sample.", () => act("pause")),
     resume: button("Resume", "Goes on where it stopped, with the workers chosen below.", () => act("resume"), "primary"),
+    why: make("p", { class: "reason" }),
     more: button("More realisations", "Goes on with the numbers typed here; what is finished stays.", () => act("more")),
     adopt: button("Use its preset", "Takes the preset inside the file for the new campaign below.", () => act("adopt")),
   };
@@ -108,7 +129,7 @@ function opened(act, fields, sender, specs) {
     fields.set(spec.name, field);
     return node;
   });
-  parts.body = make("div", {}, parts.status, ...made, make("div", { class: "buttons" }, parts.pause, parts.resume, parts.more, parts.adopt));
+  parts.body = make("div", {}, parts.status, ...made, make("div", { class: "buttons" }, parts.pause, parts.resume, parts.more, parts.adopt), parts.why);
   parts.node = make("section", { class: "group", "aria-label": "Results file" }, make("div", { class: "head" }, make("h2", {}, "Results file")),
     make("div", { class: "line" }, parts.list, parts.open), parts.error, parts.body);
   return parts;
@@ -119,16 +140,21 @@ function updateOpened(parts, state) {
   const text = JSON.stringify([names, state.running]);
   if (text !== parts.text) {
     const held = parts.list.value;
-    parts.list.replaceChildren(...names.map((name) => make("option", { value: name }, name ? name + (state.running.includes(name) ? " (running)" : "") : "none in this folder yet")));
+    parts.list.replaceChildren(...names.map((name) => make("option", { value: name, title: name }, name ? cut(name, LONGEST - (state.running.includes(name) ? 9 : 0)) + (state.running.includes(name) ? " (running)" : "") : "none in this folder yet")));
     if (names.includes(held)) parts.list.value = held;
     parts.text = text;
   }
   if (state.name !== parts.shown) { parts.shown = state.name; if (names.includes(state.name)) parts.list.value = state.name; }
+  parts.list.title = parts.list.value;
   parts.list.disabled = parts.open.disabled = !state.names.length;
   parts.error.textContent = state.error;
   parts.error.hidden = !state.error;
   parts.body.hidden = !state.name;
   parts.status.textContent = state.text;
+  parts.status.hidden = !state.text;
+  const why = state.can_more ? "" : state.touched ? state.why_more : state.running.includes(state.name) ? "" : state.why_resume;
+  parts.why.textContent = why;
+  parts.why.hidden = !why;
   parts.pause.disabled = !state.can_pause;
   parts.resume.disabled = !state.can_resume;
   parts.more.disabled = !state.can_more;
@@ -136,7 +162,7 @@ function updateOpened(parts, state) {
   for (const name of ["pause", "resume", "more"]) {
     const on = !parts[name].disabled;
     parts.hints ??= { pause: parts.pause.title, resume: parts.resume.title, more: parts.more.title };
-    parts[name].title = on ? parts.hints[name] : OFF[name];
+    parts[name].title = on ? parts.hints[name] : { pause: "it does not run on this server", resume: state.why_resume, more: state.why_more }[name];
   }
 }
 
@@ -146,12 +172,13 @@ function prediction(act) {
     rows: make("ul"), each: make("details", {}, make("summary", {}, "each density")),
     left: make("ul"), out: make("details", { class: "caution" }), outTitle: make("summary"),
     start: button("Start", "Makes the results file and runs the campaign on this server; closing the page changes nothing.", () => act("start"), "primary"),
-    why: make("p", { class: "reason" }),
+    why: make("p", { class: "reason" }), brief: make("span"), failed: make("p", { class: "refusal", role: "alert" }),
   };
+  parts.bar = make("div", { class: "bar", role: "group", "aria-label": "Start the new campaign" }, make("div", { class: "line" }, parts.brief, parts.start), parts.why, parts.failed, parts.shared);
   parts.each.append(parts.rows);
   parts.out.append(parts.outTitle, parts.left);
   parts.node = make("section", { class: "group", "aria-label": "Prediction" }, make("div", { class: "head" }, make("h2", {}, "Predicted")),
-    parts.text, parts.note, parts.shared, parts.error, parts.each, parts.out, make("div", { class: "buttons" }, parts.start), parts.why);
+    parts.text, parts.note, parts.error, parts.each, parts.out);
   return parts;
 }
 
@@ -162,7 +189,10 @@ function updatePrediction(parts, state, start) {
   parts.note.textContent = state.note;
   parts.shared.textContent = state.shared;
   parts.error.textContent = state.error;
-  for (const name of ["note", "error", "text", "shared"]) parts[name].hidden = !parts[name].textContent;
+  parts.failed.textContent = state.failed;
+  parts.brief.textContent = `New: ${state.brief || "…"}`;
+  parts.brief.classList.toggle("older", state.older);
+  for (const name of ["note", "error", "text", "shared", "failed"]) parts[name].hidden = !parts[name].textContent;
   list(parts.rows, state.rows);
   parts.each.hidden = !state.rows.length;
   list(parts.left, state.left_out);
@@ -191,7 +221,7 @@ export function render({ model, el }) {
     column.append(make("section", { class: "group", "aria-label": spec.title }, make("div", { class: "head" }, make("h2", {}, spec.title)), ...body));
   }
   const forecast = prediction(act);
-  column.append(forecast.node);
+  column.append(forecast.node, forecast.bar);
   const update = () => {
     const state = model.state;
     sender.answered(state.answered);

@@ -85,7 +85,8 @@ class Field {
   update(state) {
     this.node.hidden = state.hidden === true;
     this.node.classList.toggle("off", Boolean(state.disabled));
-    this.reason.textContent = state.disabled || state.note || "";
+    this.reason.textContent = state.disabled || state.caution || state.note || "";
+    this.reason.classList.toggle("caution", Boolean(!state.disabled && state.caution));
     this.reason.hidden = !this.reason.textContent;
     this.error.hidden = !state.error;
     this.error.textContent = state.error || "";

@@ -12,6 +12,7 @@ from lozenge_dashboard.campaigns import Watch
 from lozenge_dashboard.palette import MARKERS, Look
 from lozenge_dashboard.records import CampaignChoices
 from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay
+from lozenge_dashboard.views.pieces import CAP, EMPTY, NO_TICKS, Line, bare, bars, room, written
 from lozenge_engine.estimates import CellEstimate
 from lozenge_engine.notation import thousands, with_error
 from lozenge_engine.series import series_of
@@ -19,14 +20,11 @@ from lozenge_engine.series import series_of
 __all__ = [
     "AXIS_WORDS",
     "BLANK",
-    "CAP",
-    "EMPTY",
     "GROUP",
+    "SCALE",
     "WORDY",
     "Curve",
-    "Line",
     "Quantity",
-    "bars",
     "caution",
     "colours_of",
     "curves",
@@ -34,14 +32,10 @@ __all__ = [
     "fraction",
     "named",
     "read",
-    "room",
     "shift_words",
-    "thinned",
-    "written",
 ]
 
 GROUP = "Quantity"
-EMPTY = Limits(0.0, 1.0, 0.0, 1.0)
 AXIS_WORDS = {
     "density": "density (per area)",
     "half_width": "half-width h (patch half-widths)",
@@ -53,20 +47,13 @@ AXIS_WORDS = {
     "order": "Rényi order q",
 }
 SCALE = "scale ln(ℓ/a)"
-QUANTITIES = {
-    "entropy": "entropy S, all regions (nats)",
-    "mutual": "mutual information I (nats)",
-}
+MUTUAL = "mutual information I (nats)"
 WORDY = 7
 """Most lines of words in a figure."""
-LINE = 0.1
-"""Height of a line of words as a fraction of the figure."""
-CAP = 0.006
-"""Half-width of an error bar's ends as a fraction of the axis."""
-
-
-Line = tuple[str, str, str | None]
-"""Words, their colour, and the mark before them."""
+BESIDE = 0.022
+"""Between the marks of two placement classes at one place, as a fraction of the axis."""
+MARK = 0.025
+"""Half a mark as a fraction of a small figure's height: shorter error bars cannot be seen."""
 
 
 class Quantity(NamedTuple):
@@ -77,11 +64,14 @@ class Quantity(NamedTuple):
     words: Words
     limits: Limits
     x_ticks: tuple[tuple[float, str], ...] = ()
-    labels: tuple[str, str] = (SCALE, QUANTITIES["entropy"])
+    labels: tuple[str, str] = ("", "")
+    ticks: tuple[tuple[float, str], ...] = ()
 
 
-BLANK = Quantity(Strokes.of(), Marks.of(), Words.of(), EMPTY)
-"""The view before its first record."""
+BLANK = Quantity(
+    Strokes.of(), Marks.of(), Words.of(), EMPTY, x_ticks=NO_TICKS, labels=("", ""), ticks=NO_TICKS
+)
+"""A view that has nothing to show: no scale is invented for it."""
 
 
 class Curve(NamedTuple):
@@ -157,39 +147,15 @@ def colours_of(count: int, look: Look) -> tuple[str, ...]:
     return (look.ink,) if count == 1 else tuple(look.regions[k % 8] for k in range(count))
 
 
-def bars(x: Any, y: Any, error: Any, colour: str, cap: float) -> list[tuple[Any, ...]]:
-    """Error bars with ends; none where no error is known."""
-    some = np.isfinite(y) & np.isfinite(error)
-    x, y, e = x[some], y[some], error[some]
-    return [
-        (x, y - e, x, y + e, colour, 1.5, "solid"),
-        (x - cap, y - e, x + cap, y - e, colour, 1.5, "solid"),
-        (x - cap, y + e, x + cap, y + e, colour, 1.5, "solid"),
-    ]
-
-
-def room(x: Any, low: float, high: float, lines: int, *, least: float) -> Limits:
-    """Limits around what is known, with room above for lines of words."""
-    span = float(np.ptp(x)) or max(abs(float(x[0])), 1.0)
-    pad = max(0.08 * (high - low), least)
-    share = LINE * lines + 0.03 * bool(lines)
-    top = high + pad + share / (1 - share) * (high - low + 2 * pad)
-    return Limits(float(x.min()) - 0.06 * span, float(x.max()) + 0.06 * span, low - pad, top)
-
-
-def written(limits: Limits, lines: list[Line], look: Look) -> tuple[list[tuple[Any, ...]], Words]:
-    """Lines of words from the top left corner down, some with a mark before them."""
-    width, height = limits.x_high - limits.x_low, limits.y_high - limits.y_low
-    marks: list[tuple[Any, ...]] = []
-    words = []
-    for i, (text, colour, marker) in enumerate(lines):
-        y = limits.y_high - LINE * (i + 0.7) * height
-        x = limits.x_low + 0.01 * width
-        if marker:
-            marks.append((x + 0.015 * width, y, look.ink, marker, 8.0, 1.0))
-            x += 0.025 * width
-        words.append((x, y, text, colour))
-    return marks, Words.of(*words)
+def beside(watch: Watch, limits: Limits, x: Any) -> list[float]:
+    """Shift of each placement class's marks along the axis, so that none hides another."""
+    classes = len(watch.plan.placements)
+    places = np.unique(x)
+    width = limits.x_high - limits.x_low
+    step = min(BESIDE * width, 0.08 * width / max(1, classes - 1))
+    if places.size > 1:
+        step = min(step, 0.6 * float(np.diff(places).min()) / classes)
+    return [step * (k - (classes - 1) / 2) for k in range(classes)]
 
 
 def _sentences(watch: Watch, found: list[Curve], look: Look, *, fits: bool) -> list[Line]:
@@ -244,12 +210,14 @@ def read(watch: Watch, choices: CampaignChoices, look: Look) -> Quantity:
     numbers = watch.estimates.cells
     every = [i for curve in found for i in curve.cells]
     known = [e for i in every if (e := _estimate(numbers[i], choices)) and math.isfinite(e.mean)]
+    if not known:
+        return BLANK
     fits = choices.quantity == "entropy" and bool(watch.estimates.fits)
     lines = _sentences(watch, found, look, fits=fits)
     axis = varied(watch)
     label = SCALE if axis in ("density", "half_width") else AXIS_WORDS[axis]
     x_all = np.array([x for curve in found for x in curve.x])
-    ends = [e.mean + s * np.nan_to_num(e.error) for e in known for s in (-1, 1)] or [0.0, 1.0]
+    ends = [e.mean + s * np.nan_to_num(e.error) for e in known for s in (-1, 1)]
     low, high = float(min(ends)), float(max(ends))
     if choices.quantity == "mutual":
         low = min(low, 0.0)
@@ -257,22 +225,22 @@ def read(watch: Watch, choices: CampaignChoices, look: Look) -> Quantity:
         x_all, low, high, len(lines), least=0.02 if choices.quantity == "mutual" else 0.05
     )
     cap = CAP * (limits.x_high - limits.x_low)
+    shifts = beside(watch, limits, x_all)
     strokes: list[tuple[Any, ...]] = []
     marks: list[tuple[Any, ...]] = []
     for curve, colour in zip(found, colours_of(len(found), look), strict=True):
-        x = np.array(curve.x)
+        placed = [watch.design.cells[i].placement for i in curve.cells]
+        x = np.array(curve.x) + np.array([shifts[k] for k in placed])
         of = [_estimate(numbers[i], choices) for i in curve.cells]
         y = np.array([math.nan if e is None else e.mean for e in of])
         error = np.array([math.nan if e is None else e.error for e in of])
         strokes += bars(x, y, error, colour, cap)
         some = np.isfinite(y)
-        marker = np.array(
-            [MARKERS[watch.design.cells[i].placement % len(MARKERS)] for i in curve.cells], object
-        )
+        marker = np.array([MARKERS[k % len(MARKERS)] for k in placed], object)
         fill = np.array(curve.used, float) if fits else np.ones(x.size)
-        marks.append((x[some], y[some], colour, marker[some], 8.0, fill[some]))
+        marks.append((x[some], y[some], colour, marker[some], 7.0, fill[some]))
     if fits:
-        strokes = _fit_lines(watch, found, look) + strokes
+        strokes = _fit_lines(watch, found, look, shifts) + strokes
     if choices.quantity == "mutual":
         strokes.insert(0, (limits.x_low, 0.0, limits.x_high, 0.0, look.rule, 1.0, "solid"))
     keys, words = written(limits, lines, look)
@@ -282,8 +250,17 @@ def read(watch: Watch, choices: CampaignChoices, look: Look) -> Quantity:
         words,
         limits,
         _categories(watch, axis),
-        (label, QUANTITIES[choices.quantity]),
+        (label, MUTUAL if choices.quantity == "mutual" else _entropy_label(watch)),
     )
+
+
+def _entropy_label(watch: Watch) -> str:
+    return "entropy S, all regions (nats)" if several(watch) else "entropy S (nats)"
+
+
+def several(watch: Watch) -> bool:
+    """Whether a point has more than one region."""
+    return any(len(cell.config.regions) > 1 for cell in watch.design.cells)
 
 
 def _categories(watch: Watch, axis: str) -> tuple[tuple[float, str], ...]:
@@ -296,7 +273,9 @@ def _categories(watch: Watch, axis: str) -> tuple[tuple[float, str], ...]:
     return ()
 
 
-def _fit_lines(watch: Watch, found: list[Curve], look: Look) -> list[tuple[Any, ...]]:
+def _fit_lines(
+    watch: Watch, found: list[Curve], look: Look, shifts: list[float]
+) -> list[tuple[Any, ...]]:
     """Fitted lines over their windows, and the reference slope through their middle."""
     strokes: list[tuple[Any, ...]] = []
     for fit, curve, colour in zip(
@@ -307,9 +286,10 @@ def _fit_lines(watch: Watch, found: list[Curve], look: Look) -> list[tuple[Any, 
             continue
         best = fit.report.fit
         low, high = min(used), max(used)
-        for _, constant, _ in best.constants:
+        for k, constant, _ in best.constants:
             first, last = (constant + best.slope * x for x in (low, high))
-            strokes.append((low, first, high, last, colour, 1.5, "solid"))
+            ends = low + shifts[k], high + shifts[k]
+            strokes.append((ends[0], first, ends[1], last, colour, 1.5, "solid"))
         if fit.reference is not None:
             middle = (low + high) / 2
             y = best.constants[0][1] + best.slope * middle
@@ -320,24 +300,24 @@ def _fit_lines(watch: Watch, found: list[Curve], look: Look) -> list[tuple[Any, 
 
 def draw(data: Quantity) -> hv.Overlay:
     """Draw it."""
-    return overlay(GROUP, data.lines, data.marks, data.words)
+    return bare(overlay(GROUP, data.lines, data.marks, data.words), data)
 
 
 def caution(watch: Watch, choices: CampaignChoices) -> str:
     """Say what the marks stand for and what the errors leave out."""
     numbers = watch.estimates.cells
     counts = [cell.entropy.count for cell in numbers]
+    if choices.quantity == "mutual" and not several(watch):
+        return "One region: there is no mutual information."
     if not any(counts):
         return "Waiting for the first realisation."
     parts = []
-    if choices.quantity == "mutual" and all(c.mutual_information is None for c in numbers):
-        return "One region: there is no mutual information."
     if choices.quantity == "entropy" and watch.estimates.fits:
         out = sum(not used for curve in curves(watch) for used in curve.used)
         if out:
-            parts.append(
-                f"hollow: under {watch.plan.smallest_region} elements, left out of the fit"
-            )
+            fitted = any(fit.report is not None for fit in watch.estimates.fits)
+            why = "left out of the fit" if fitted else "too few for a fit"
+            parts.append(f"hollow: under {watch.plan.smallest_region} elements, {why}")
     if min(counts) == 1:
         parts.append("one realisation: no error is known")
     if min(counts) == 0:
@@ -345,22 +325,34 @@ def caution(watch: Watch, choices: CampaignChoices) -> str:
     marked = sum(cell.untrusted + cell.missing for cell in numbers)
     if marked:
         parts.append(f"{thousands(marked)} samples carry a mark or have no number (table)")
-    parts.append(
-        "nearest pair, union by support" if choices.quantity == "mutual" else "union by support"
-    )
+    parts += _regions_words(watch, choices)
+    if _hidden(watch, choices):
+        parts.append("most errors are smaller than their marks")
     if any(len(s.cells) > 1 for s in watch.design.sprinklings):
         parts.append("points share sprinklings: errors are correlated")
-    text = "; ".join(parts)
+    text = "; ".join(parts) or "bars: one standard error"
     return text[0].upper() + text[1:] + "."
 
 
-def thinned(
-    ticks: list[tuple[float, str]], low: float, high: float, *, most: int
-) -> tuple[tuple[float, str], ...]:
-    """Ticks that stand far enough from each other to be read."""
-    apart = (high - low) / most
-    kept: list[tuple[float, str]] = []
-    for at, text in sorted(ticks):
-        if not kept or at - kept[-1][0] >= apart:
-            kept.append((at, text))
-    return tuple(kept)
+def _regions_words(watch: Watch, choices: CampaignChoices) -> list[str]:
+    """What several regions, and their places, ask to be said."""
+    parts = []
+    if several(watch):
+        pair = "nearest pair, " if choices.quantity == "mutual" else ""
+        parts.append(f"{pair}union by support (direct sum: table)")
+    if varied(watch) == "separation":
+        parts.append("touching regions and regions near the patch's edge are another regime")
+    if len(watch.plan.placements) > 1:
+        parts.append("placements stand side by side")
+    return parts
+
+
+def _hidden(watch: Watch, choices: CampaignChoices) -> bool:
+    """Whether most error bars end within their marks."""
+    found = [e for cell in watch.estimates.cells if (e := _estimate(cell, choices))]
+    means, errors = (np.array([getattr(e, name) for e in found]) for name in ("mean", "error"))
+    errors = errors[np.isfinite(errors)]
+    if not errors.size:
+        return False
+    low = 0.0 if choices.quantity == "mutual" else float(np.nanmin(means))
+    return bool(np.median(errors) < MARK * (float(np.nanmax(means)) - low))

@@ -8,22 +8,25 @@ from typing import Any, NamedTuple
 import holoviews as hv
 import numpy as np
 
+from lozenge_dashboard.campaign_text import SYMBOLS, error_words, out_of_reach
 from lozenge_dashboard.campaigns import Watch
 from lozenge_dashboard.palette import Look
 from lozenge_dashboard.records import CampaignChoices
 from lozenge_dashboard.views.campaign import (
     BLANK,
     GROUP,
+    SCALE,
     caution,
     draw,
     read,
-    thinned,
 )
 from lozenge_dashboard.views.catalogue import Figure, View
 from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay, polyline, register
+from lozenge_dashboard.views.pieces import EMPTY, NO_TICKS, bare, thinned
 from lozenge_dashboard.views.slope import (
     SLOPE_BLANK,
     SLOPE_GROUP,
+    SLOPE_LABELS,
     draw_slope,
     read_slope,
     slope_caution,
@@ -34,7 +37,6 @@ __all__ = ["CAMPAIGN_VIEWS", "Effort", "read_counts", "read_error", "register_ca
 
 COUNT_GROUP = "Realisations"
 ERROR_GROUP = "ErrorReached"
-EMPTY = Limits(0.0, 1.0, 0.0, 1.0)
 WIDE = 10
 """Bars up to which each is drawn wide and has its number."""
 DECADES = 2.0
@@ -53,9 +55,11 @@ class Effort(NamedTuple):
     labels: tuple[str, str] = ("realisations", "")
 
 
-COUNT_BLANK = Effort(Strokes.of(), Marks.of(), Words.of(), EMPTY)
-ERROR_BLANK = COUNT_BLANK._replace(labels=("CPU time (s)", "standard error reached"))
-"""The views before their first record."""
+COUNT_BLANK = Effort(
+    Strokes.of(), Marks.of(), Words.of(), EMPTY, NO_TICKS, NO_TICKS, labels=("", "")
+)
+ERROR_BLANK = COUNT_BLANK
+"""The views before their first record: no scale is invented for them."""
 
 
 # ---------------------------------------------------------------- realisations
@@ -118,7 +122,7 @@ def _said(done: float, failed: float) -> str:
 
 def draw_counts(data: Effort) -> hv.Overlay:
     """Draw the realisations."""
-    return overlay(COUNT_GROUP, data.lines, data.marks, data.words)
+    return bare(overlay(COUNT_GROUP, data.lines, data.marks, data.words), data)
 
 
 def counts_caution(watch: Watch, choices: CampaignChoices) -> str:
@@ -126,11 +130,13 @@ def counts_caution(watch: Watch, choices: CampaignChoices) -> str:
     parts = []
     if len(watch.design.sprinklings) < len(watch.design.cells):
         parts.append("points and placements of one density share their sprinklings")
-    most = f"at most {thousands(watch.plan.realisations)} each"
+    most = thousands(watch.plan.realisations)
     if watch.plan.target is None:
-        parts.append(f"dashed: the {thousands(watch.plan.realisations)} planned")
+        parts.append(f"dashed: the {most} planned")
     else:
-        parts.append(f"{most}; more go where they lower the target's error most for their time")
+        parts.append(f"at most {most} each, more where they lower the error most for their time")
+    if out_of_reach(watch):
+        parts.append("too few for the target (below)")
     failed = sum(failed for _, failed in watch.counts)
     if failed:
         parts.append(f"{thousands(failed)} failed: reasons below")
@@ -163,7 +169,7 @@ def read_error(watch: Watch, choices: CampaignChoices, look: Look) -> Effort:
     history = [(t, e) for t, e in watch.estimates.history if t > 0 and e > 0]
     label = _error_label(watch)
     if target is None or not history:
-        return ERROR_BLANK._replace(labels=("CPU time (s)", label))
+        return ERROR_BLANK
     scale = 100.0 if target.relative else 1.0
     x = np.log10([t for t, _ in history])
     y = np.log10([scale * e for _, e in history])
@@ -202,21 +208,21 @@ def _goal(watch: Watch) -> str:
     target = watch.plan.target
     if target is None:
         return ""
-    return f"wanted: {100 * target.error:g} %" if target.relative else f"wanted: {target.error:g}"
+    return f"wanted: {error_words(target.error, target)}"
 
 
 def _error_label(watch: Watch) -> str:
     target = watch.plan.target
     if target is None:
         return "standard error reached"
-    symbol = {"slope": "b", "entropy": "S", "mutual_information": "I"}[target.quantity]
+    symbol = SYMBOLS[target.quantity]
     unit = "%" if target.relative else "nats"
     return f"error of {symbol} reached ({unit})"
 
 
 def draw_error(data: Effort) -> hv.Overlay:
     """Draw the error."""
-    return overlay(ERROR_GROUP, data.lines, data.marks, data.words)
+    return bare(overlay(ERROR_GROUP, data.lines, data.marks, data.words), data)
 
 
 def error_caution(watch: Watch, choices: CampaignChoices) -> str:
@@ -227,6 +233,14 @@ def error_caution(watch: Watch, choices: CampaignChoices) -> str:
     if not watch.estimates.history:
         return "Waiting for two realisations of every sprinkling: no error is known before."
     which = "" if target.quantity == "slope" else ", the largest of all points"
+    if watch.estimates.error <= target.error:
+        return f"One standard error{which}; the target is reached."
+    if out_of_reach(watch):
+        most = thousands(watch.plan.realisations)
+        return (
+            f"One standard error{which}; dotted: 1/√time, if scatter stays; at most {most} "
+            "realisations are planned, the target needs more."
+        )
     return f"One standard error{which}; dotted: falling as 1/√time from here, if scatter stays."
 
 
@@ -240,7 +254,7 @@ CAMPAIGN_VIEWS = (
                 read,
                 draw,
                 BLANK,
-                {"x": BLANK.labels[0], "y": BLANK.labels[1], "offset": (8.0, 0.0)},
+                {"x": SCALE, "y": "entropy S (nats)", "offset": (8.0, 0.0)},
             )
         },
         caution,
@@ -256,7 +270,7 @@ CAMPAIGN_VIEWS = (
                 read_slope,
                 draw_slope,
                 SLOPE_BLANK,
-                {"x": SLOPE_BLANK.labels[0], "y": SLOPE_BLANK.labels[1], "offset": (8.0, 0.0)},
+                {"x": SLOPE_LABELS[0], "y": SLOPE_LABELS[1], "offset": (8.0, 0.0)},
             )
         },
         slope_caution,
@@ -286,7 +300,7 @@ CAMPAIGN_VIEWS = (
                 read_error,
                 draw_error,
                 ERROR_BLANK,
-                {"x": ERROR_BLANK.labels[0], "y": ERROR_BLANK.labels[1], "offset": (4.0, 0.0)},
+                {"x": "CPU time (s)", "y": "standard error reached", "offset": (4.0, 0.0)},
             )
         },
         error_caution,

@@ -8,38 +8,35 @@ from typing import Any
 import holoviews as hv
 import numpy as np
 
+from lozenge_dashboard.campaign_text import complete, drift
 from lozenge_dashboard.campaigns import Watch
 from lozenge_dashboard.palette import Look
 from lozenge_dashboard.records import CampaignChoices
 from lozenge_dashboard.views.campaign import (
-    CAP,
-    EMPTY,
+    BLANK,
     WORDY,
-    Line,
     Quantity,
-    bars,
     colours_of,
     fraction,
     named,
-    room,
-    thinned,
-    written,
 )
-from lozenge_dashboard.views.marks import Marks, Strokes, Words, overlay
+from lozenge_dashboard.views.marks import Marks, Strokes, overlay
+from lozenge_dashboard.views.pieces import CAP, Line, bare, bars, room, thinned, written
 from lozenge_engine.estimates import FitOf
 from lozenge_engine.notation import thousands
 
-__all__ = ["SLOPE_BLANK", "SLOPE_GROUP", "draw_slope", "read_slope", "slope_caution"]
+__all__ = [
+    "SLOPE_BLANK",
+    "SLOPE_GROUP",
+    "SLOPE_LABELS",
+    "draw_slope",
+    "read_slope",
+    "slope_caution",
+]
 
 SLOPE_GROUP = "Slope"
-SLOPE_BLANK = Quantity(
-    Strokes.of(),
-    Marks.of(),
-    Words.of(),
-    EMPTY,
-    (),
-    ("elements of the smallest region kept", "slope b (nats)"),
-)
+SLOPE_LABELS = ("elements of the smallest region kept", "slope b (nats)")
+SLOPE_BLANK = BLANK
 """The slope's view before its first fit."""
 
 
@@ -88,17 +85,17 @@ def read_slope(watch: Watch, choices: CampaignChoices, look: Look) -> Quantity:
         [(x, thousands(round(10**x))) for x in sizes], limits.x_low, limits.x_high, most=9
     )
     return Quantity(
-        Strokes.of(*strokes), Marks.of(*marks, *keys), words, limits, ticks, SLOPE_BLANK.labels
+        Strokes.of(*strokes), Marks.of(*marks, *keys), words, limits, ticks, SLOPE_LABELS
     )
 
 
 def draw_slope(data: Quantity) -> hv.Overlay:
     """Draw the slope."""
-    return overlay(SLOPE_GROUP, data.lines, data.marks, data.words)
+    return bare(overlay(SLOPE_GROUP, data.lines, data.marks, data.words), data)
 
 
 def slope_caution(watch: Watch, choices: CampaignChoices) -> str:
-    """Say whether the slope is settled, or why there is none."""
+    """Say whether the slope is settled and how far it drifts, or why there is none."""
     if not watch.estimates.fits:
         return "No density or half-width axis: there is no slope to fit."
     fits = _fitted(watch)
@@ -106,11 +103,19 @@ def slope_caution(watch: Watch, choices: CampaignChoices) -> str:
         return f"{watch.estimates.fits[0].note[:1].upper()}{watch.estimates.fits[0].note[1:]}."
     said = []
     for _, fit in fits:
-        if fit.report is not None:
-            head = f"{named(fit.label)}: " if fit.label else ""
-            said.append(f"{head}{'settled' if fit.report.settled else 'not settled'}")
-    if len(fits) == 1 and fits[0][1].report is not None:
-        said[0] += f": {fits[0][1].report.why}"
+        if fit.report is None:
+            continue
+        head = f"{named(fit.label)}: " if fit.label else ""
+        word = "not settled" if not fit.report.settled else "settled"
+        if fit.report.settled and not complete(watch):
+            word = "settled so far"
+        moved = drift(fit.report)
+        tail = ""
+        if math.isfinite(moved):
+            tail = f", without small sizes b moves by up to {moved:.2g} of its error"
+        if len(fits) == 1 and not fit.report.settled and "dropping" not in fit.report.why:
+            word += f" ({fit.report.why})"
+        said.append(f"{head}{word}{tail}")
     said.append("slopes share samples and move together")
     if watch.estimates.fits[0].axis == "half_width":
         said.append("the place in the patch changes too: no K/3")

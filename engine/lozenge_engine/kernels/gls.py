@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from types import MappingProxyType
 from typing import NamedTuple
 
 import numpy as np
@@ -12,8 +13,10 @@ from lozenge_engine.kernels.cells import MODELS, Group, Model, Refused
 from lozenge_engine.kernels.controls import Reduction, reduction
 from lozenge_engine.kernels.resampling import Bootstrap, bootstrap
 from lozenge_engine.kernels.trend import LineFit, fit, slope_weights
+from lozenge_engine.notation import decimals_for, with_error
 
 __all__ = [
+    "LAWS",
     "MODELS",
     "Bootstrap",
     "Group",
@@ -33,11 +36,14 @@ LEAST_P = 0.05
 """A fit with a smaller p-value is not settled."""
 LEAST_SIZES = 3
 """Sizes that are left when the smallest are dropped one by one."""
-_LAWS = {
-    "log": "S = b x + c",
-    "log_root": "S = b x + d/sqrt(n) + c",
-    "volume": "S = a n + c",
-}
+LAWS: Mapping[Model, str] = MappingProxyType(
+    {
+        "log": "S = b x + c",
+        "log_root": "S = b x + d/sqrt(n) + c",
+        "volume": "S = v n + c",
+    }
+)
+"""The laws as they are written in words; x = ln(l/a), n = elements of the smallest region."""
 
 
 class SlopeReport(NamedTuple):
@@ -76,10 +82,13 @@ class SlopeReport(NamedTuple):
             One sentence a line.
         """
         best = self.fit
+        known = math.isfinite(best.slope_error) and best.slope_error > 0.0
+        digits = min(12, max(0, decimals_for(best.slope_error))) if known else 4
         lines = [
-            f"b = {_with_error(best.slope, best.slope_error)}, "
-            f"95 % interval {best.low:.4f} to {best.high:.4f}.",
-            f"{best.cells} cells, at least {best.realisations} realisations each; {best.method}.",
+            f"b = {with_error(best.slope, best.slope_error)}, "
+            f"95 % interval {best.low:.{digits}f} to {best.high:.{digits}f}.",
+            f"{best.cells} cells (points in placement classes), at least {best.realisations} "
+            f"realisations each; {best.method}.",
         ]
         if math.isfinite(best.p_value):
             lines.append(f"chi2/dof = {best.chi2:.1f}/{best.dof}, p = {best.p_value:.2g}.")
@@ -96,20 +105,15 @@ class SlopeReport(NamedTuple):
         if len(ranked) > 1:
             least = ranked[0].aicc
             lines.append(
-                "AICc above the least: "
-                + ", ".join(f"{_LAWS[m.model]} {m.aicc - least:.1f}" for m in ranked)
-                + "."
+                "Laws by AICc (0 is best): "
+                + "; ".join(f"{LAWS[m.model]}: {m.aicc - least:.1f}" for m in ranked)
+                + ". Here x = ln(l/a), and n = elements of the smallest region."
             )
+            if ranked[0].model != "log" and math.isfinite(best.aicc):
+                lines.append(
+                    f"The logarithmic law is not the best one, by {best.aicc - least:.1f}."
+                )
         return "\n".join(lines)
-
-
-def _with_error(value: float, error: float) -> str:
-    """Value with the error's two leading digits in brackets."""
-    if not (math.isfinite(error) and error > 0.0):
-        return f"{value:.4g}"
-    digits = max(0, 1 - math.floor(math.log10(error)))
-    shown = f"{error:.{digits}f}" if error >= 1.0 else f"{error * 10**digits:.0f}"
-    return f"{value:.{digits}f}({shown})"
 
 
 def report(

@@ -8,16 +8,43 @@ from collections.abc import Iterable
 
 import numpy as np
 
+from lozenge_dashboard.campaign_text.cautions import (
+    SYMBOLS,
+    alone,
+    complete,
+    drift,
+    error_words,
+    few,
+    fit_cautions,
+    out_of_reach,
+    reach,
+    timing,
+)
 from lozenge_dashboard.campaigns import Status, Watch
+from lozenge_engine.campaign import Progress
 from lozenge_engine.estimates import CellEstimate, FitOf
 from lozenge_engine.geometry import region_letter
 from lozenge_engine.kernels.scaling import Estimate
 from lozenge_engine.notation import NO_NUMBER, duration, thousands, with_error
+from lozenge_engine.series import fittable
 
-__all__ = ["EMPTY", "columns", "line_html", "rows", "state_words", "words_html"]
+__all__ = [
+    "EMPTY",
+    "SYMBOLS",
+    "columns",
+    "complete",
+    "drift",
+    "error_words",
+    "line_html",
+    "out_of_reach",
+    "rows",
+    "state_words",
+    "words_html",
+]
 
-EMPTY = "No results file is open: start a campaign, or open a file of this folder."
-SYMBOLS = {"slope": "b", "entropy": "S", "mutual_information": "I"}
+EMPTY = ""
+"""What each view says while no file is open: nothing, since the line above them says it."""
+NOTHING_OPEN = "No results file is open: start a campaign, or open a file of this folder."
 
 
 def state_words(watch: Watch | None, status: Status) -> str:
@@ -40,36 +67,53 @@ def _reading(name: str, value: str, small: str = "", *, mark: bool = False) -> s
     return f"<div><dt>{html.escape(name)}</dt><dd{kind}>{html.escape(value)}</dd>{tail}</div>"
 
 
-def _percent(error: float, *, relative: bool) -> str:
-    """An error as the target counts it."""
-    if not math.isfinite(error):
-        return NO_NUMBER
-    return f"{100 * error:.2g} %" if relative else f"{error:.2g}"
-
-
 def _wanted(watch: Watch) -> list[str]:
     """The error reached and the one that is wanted."""
     target = watch.plan.target
     if target is None:
         return []
     error = watch.estimates.error
-    now = _percent(error, relative=target.relative) if math.isfinite(error) else NO_NUMBER
-    goal = _percent(target.error, relative=target.relative)
+    goal = error_words(target.error, target)
+    now = error_words(error, target, digits=2)
+    if now == error_words(target.error, target, digits=2):
+        now = error_words(error, target)  # on which side of the goal it lies
     return [_reading(f"error of {SYMBOLS[target.quantity]}", now, f"wanted {goal}")]
 
 
-def _slopes(watch: Watch) -> list[str]:
-    """The first fits' slopes."""
+def _slopes(watch: Watch, *, running: bool) -> list[str]:
+    """The first fits' slopes; none where no fit is possible and none was asked for."""
+    target = watch.plan.target
+    asked = target is not None and target.quantity == "slope"
     found = []
     for fit in watch.estimates.fits[:3]:
+        possible = fittable(watch.design, fit.series)
+        if not (possible or asked):
+            continue
         name = f"b, {fit.label.replace('_', ' ')}" if fit.label else "b"
         if fit.report is None:
-            found.append(_reading(name, NO_NUMBER, "no fit yet"))
+            found.append(
+                _reading(name, NO_NUMBER, "no fit yet" if running and possible else "no fit")
+            )
         else:
             best = fit.report.fit
             word = "settled" if fit.report.settled else "not settled"
+            word += " so far" if running and fit.report.settled else ""
             found.append(_reading(name, with_error(best.slope, best.slope_error), word))
     return found
+
+
+def _left(watch: Watch, progress: Progress) -> str:
+    """The reading of the time that is left, with what it leads to."""
+    plan, left = watch.plan, progress.seconds_left
+    if plan.budget is not None and left >= plan.budget - progress.elapsed - 0.5:
+        to = "of the budget"
+    elif plan.target is None or not math.isfinite(progress.error):
+        to = "of this round"
+    elif out_of_reach(watch):
+        to = "to the last one planned"
+    else:
+        to = "to the target, if scatter stays"
+    return _reading("time left, about", duration(left), to)
 
 
 def line_html(watch: Watch | None, status: Status) -> str:
@@ -88,9 +132,9 @@ def line_html(watch: Watch | None, status: Status) -> str:
         HTML; what comes from files is escaped.
     """
     if watch is None:
-        words = status.text or EMPTY
+        words = status.text or NOTHING_OPEN
         return f"<dl class='readings'>{_reading('campaign', NO_NUMBER, words)}</dl>"
-    parts = _slopes(watch) + _wanted(watch)
+    parts = _slopes(watch, running=status.running) + _wanted(watch)
     done = sum(done for done, _ in watch.counts)
     failed = sum(failed for _, failed in watch.counts)
     progress = status.progress if status.running else None
@@ -103,8 +147,7 @@ def line_html(watch: Watch | None, status: Status) -> str:
         _reading("running time", duration(elapsed), f"CPU {duration(watch.estimates.cpu_seconds)}")
     )
     if progress:
-        left = progress.seconds_left
-        parts.append(_reading("time left, about", duration(left)))
+        parts.append(_left(watch, progress))
     kind = "status busy" if status.running else "status"
     said = html.escape(f"{watch.name}: {state_words(watch, status)}")
     return f"<dl class='readings'>{''.join(parts)}<div class='{kind}'>{said}</div></dl>"
@@ -113,17 +156,24 @@ def line_html(watch: Watch | None, status: Status) -> str:
 # ---------------------------------------------------------------- paragraphs
 
 
-def _fit_lines(fit: FitOf) -> list[str]:
+def _fit_lines(watch: Watch, fit: FitOf, *, running: bool) -> list[str]:
     """What a fit says, and where it stands."""
-    lines = fit.report.explain().splitlines() if fit.report is not None else [_sentence(fit.note)]
-    low, high = fit.regime.elements
-    where = f"Regime: {thousands(round(low))} to {thousands(round(high))} elements expected in the "
-    where += "smallest region"
-    if all(map(math.isfinite, fit.regime.kept_ratio)):
-        where += ", kept/nominal {:.2f} to {:.2f}".format(*fit.regime.kept_ratio)
-    where += ", largest half-width {:.3g} to {:.3g}".format(*fit.regime.size)
-    if math.isfinite(fit.regime.gap):
-        where += f", smallest gap {fit.regime.gap:.3g} or {fit.regime.gap_lengths:.2g} a"
+    if fit.report is not None:
+        said = fit.report.explain()
+        lines = (
+            said.replace("\nSettled: ", "\nSettled so far: ") if running else said
+        ).splitlines()
+    else:
+        lines = [_sentence(fit.note), _advice(watch, fit)]
+    regime = fit.regime
+    low, high = (thousands(round(n)) for n in regime.elements)
+    where = f"Regime: {_span(low, high)} elements expected in the smallest region"
+    if all(map(math.isfinite, regime.kept_ratio)):
+        where += ", kept/nominal " + _span(*(f"{r:.2f}" for r in regime.kept_ratio))
+    largest = "largest half-width" if _most(watch) > 1 else "half-width"
+    where += f", {largest} " + _span(*(f"{h:.3g}" for h in regime.size))
+    if math.isfinite(regime.gap):
+        where += f", smallest gap {regime.gap:.3g} or {regime.gap_lengths:.2g} a"
     lines.append(where + " (patch half-widths).")
     if fit.reference is not None:
         lines.append(
@@ -135,43 +185,28 @@ def _fit_lines(fit: FitOf) -> list[str]:
     return lines
 
 
+def _span(low: str, high: str) -> str:
+    return low if low == high else f"{low} to {high}"
+
+
+def _most(watch: Watch) -> int:
+    """Most regions of a point."""
+    return max(len(cell.regions) for cell in watch.estimates.cells)
+
+
+def _advice(watch: Watch, fit: FitOf) -> str:
+    """The way to a fit that is not there."""
+    if fittable(watch.design, fit.series):
+        return ""  # the note says what is missing
+    larger = "larger densities" if fit.axis == "density" else "larger half-widths or densities"
+    return (
+        f"For a fit start a campaign with more sizes, {larger}, or fewer least elements "
+        "(the smaller the regions, the less they follow the law)."
+    )
+
+
 def _sentence(text: str) -> str:
     return f"{text[:1].upper()}{text[1:]}." if text else ""
-
-
-def _alone(watch: Watch) -> list[str]:
-    """That errors are not known yet, and that marks stand."""
-    counts = [cell.entropy.count for cell in watch.estimates.cells]
-    said = []
-    if any(n == 1 for n in counts):
-        said.append("Points with one realisation: no error is known.")
-    marked = sum(cell.untrusted for cell in watch.estimates.cells)
-    if marked:
-        said.append(
-            f"{thousands(marked)} samples carry a mark (certificate or rank) and are in the means."
-        )
-    missing = sum(cell.missing for cell in watch.estimates.cells)
-    if missing:
-        said.append(
-            f"{thousands(missing)} samples have no number: those points could not be computed on "
-            "their sprinklings, and what is left is a selected sample."
-        )
-    return said
-
-
-def _timing(watch: Watch) -> list[str]:
-    """How far off the prediction was."""
-    good = [done - failed for done, failed in watch.counts]
-    if len(watch.predicted) != len(good) or not sum(good):
-        return []
-    predicted = sum(n * s for n, (s, _) in zip(good, watch.predicted, strict=True))
-    taken = watch.estimates.cpu_seconds
-    if not (predicted > 0 and taken > 0):
-        return []
-    return [
-        f"CPU time so far {duration(taken)}, predicted {duration(predicted)} "
-        f"({taken / predicted:.2f} times)."
-    ]
 
 
 def _block(title: str, lines: Iterable[str], kind: str = "") -> str:
@@ -200,13 +235,15 @@ def words_html(watch: Watch | None, status: Status) -> str:
     blocks = []
     for fit in watch.estimates.fits:
         title = "The fit" if not fit.label else f"The fit, {fit.label.replace('_', ' ')}"
-        blocks.append(_block(title, _fit_lines(fit)))
+        blocks.append(_block(title, _fit_lines(watch, fit, running=status.running)))
     if status.failed:
         blocks.append(_block("The run ended", [status.text], "refusal"))
     failures = [f"{thousands(n)} times: {why}" for why, n in watch.estimates.failures]
     blocks.append(_block("Failed realisations, by reason", failures))
     blocks.append(_block("Left out", watch.design.left_out))
-    blocks.append(_block("To be careful about", [*_alone(watch), *_timing(watch)]))
+    careful = [*reach(watch), *fit_cautions(watch), *few(watch), *alone(watch)]
+    elapsed = status.progress.elapsed if status.running and status.progress else watch.elapsed
+    blocks.append(_block("To be careful about", [*careful, *timing(watch, elapsed)]))
     return "".join(blocks)
 
 
@@ -218,8 +255,8 @@ def columns(watch: Watch) -> list[str]:
     heads = [axis.name.replace("_", " ") for axis in watch.plan.axes]
     if len(watch.plan.placements) > 1:
         heads.append("shift t, x")
-    heads += ["ln(l/a)", "elements", "realisations", "S by support"]
-    most = max(len(cell.regions) for cell in watch.estimates.cells)
+    most = _most(watch)
+    heads += ["ln(l/a)", "elements", "realisations", "S by support" if most > 1 else "S"]
     if most > 1:
         heads += [f"S({region_letter(k)})" for k in range(most)]
         heads += ["S direct sum", "I by support", "I direct sum", "cross block"]
@@ -241,8 +278,10 @@ def _shown(value: object) -> str:
 
 def rows(watch: Watch) -> list[list[str]]:
     """The table of points, one row for each point in each placement class."""
-    used = {i for fit in watch.estimates.fits for i in fit.series.used}
-    most = max(len(cell.regions) for cell in watch.estimates.cells)
+    fits = watch.estimates.fits
+    used = {i for fit in fits for i in fit.series.used}
+    fitted = {i for fit in fits if fit.report is not None for i in fit.series.used}
+    most = _most(watch)
     table = []
     for found in watch.estimates.cells:
         cell = watch.design.cells[found.cell]
@@ -256,7 +295,8 @@ def rows(watch: Watch) -> list[list[str]]:
         row.append(f"{found.kept_ratio:.3f}" if np.isfinite(found.kept_ratio) else NO_NUMBER)
         row.append(str(found.untrusted + found.missing))
         if watch.estimates.fits:
-            row.append("yes" if found.cell in used else "left out")
+            some = "yes" if found.cell in fitted else "no fit"
+            row.append(some if found.cell in used else "left out")
         table.append(row)
     return table
 
