@@ -74,7 +74,7 @@ def test_two_workers_against_one(
 
 def test_a_cluster_against_the_processes(tmp_path: Path) -> None:
     distributed = pytest.importorskip("distributed", reason="needs the extra cluster")
-    wanted = campaign(2000.0, 24)
+    wanted = campaign(2000.0, 72)  # the cluster's start, about 0.7 s, is not its pace
     ratios = []
     with (
         distributed.LocalCluster(
