@@ -32,10 +32,10 @@ __all__ = [
     "NO_FORECAST",
     "Asked",
     "CampaignBoard",
-    "error_words",
     "forecast_words",
     "foreseen",
     "read_file",
+    "refusal_words",
     "sharing_words",
     "tried",
     "worker_caution",
@@ -281,7 +281,7 @@ def sharing_words(names: Sequence[str], *, workers: int, busy: int) -> str:
     return f"{', '.join(names)} runs too: {cost}."
 
 
-def error_words(error: Exception, folder: Path) -> str:
+def refusal_words(error: Exception, folder: Path) -> str:
     """An error as the page says it: bare file names, given and allowed once.
 
     Parameters

@@ -18,10 +18,10 @@ from lozenge_dashboard.campaign_board import (
     NO_FORECAST,
     Asked,
     CampaignBoard,
-    error_words,
     forecast_words,
     foreseen,
     read_file,
+    refusal_words,
     sharing_words,
     tried,
     worker_caution,
@@ -236,7 +236,7 @@ class CampaignSession:
         """Show the campaign that was started or went on, or say why it did not."""
         self.acting = ""
         name, error = outcome if isinstance(outcome, tuple) else ("", outcome)
-        words = error_words(error, self.campaigns.folder) if error is not None else ""
+        words = refusal_words(error, self.campaigns.folder) if error is not None else ""
         if self._starting:
             self.start_error = words
         else:
@@ -265,7 +265,7 @@ class CampaignSession:
 
     def _predicted(self, outcome: tuple[Preset, Forecast] | Exception) -> None:
         if isinstance(outcome, Exception):
-            self.forecast = NO_FORECAST | {"error": error_words(outcome, self.campaigns.folder)}
+            self.forecast = NO_FORECAST | {"error": refusal_words(outcome, self.campaigns.folder)}
         else:
             self.forecast = forecast_words(outcome[1])
         self._push()
@@ -313,7 +313,7 @@ class CampaignSession:
             self._version = None  # the other file was opened meanwhile
             return
         if isinstance(found, Exception):
-            self.watch, self.file_error = None, error_words(found, self.campaigns.folder)
+            self.watch, self.file_error = None, refusal_words(found, self.campaigns.folder)
         else:
             target = found.plan.target
             if self.watch is None and target is not None:

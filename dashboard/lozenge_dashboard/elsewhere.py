@@ -13,7 +13,6 @@ from collections.abc import Callable
 from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
-from lozenge_dashboard.jobs import ONE_THREAD
 from lozenge_engine.errors import InputError
 from lozenge_engine.workers import one_thread, watch_parent
 
@@ -44,7 +43,7 @@ def search(connection: Connection, parent: int, config: Config, points: PointFil
     """
     watch_parent(parent)
     from lozenge_engine.pipeline import prepare
-    from lozenge_engine.stages import Stages
+    from lozenge_engine.stages import ONE_THREAD, Stages
 
     try:
         connection.send(prepare(config, points=points, stages=Stages(threads_from=ONE_THREAD)))

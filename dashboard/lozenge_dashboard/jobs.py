@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from lozenge_engine.pointfile import PointFile
     from lozenge_engine.samples import Draw, Reading
 
-__all__ = ["ONE_THREAD", "Failure", "Flight", "Progress", "Workshop"]
+__all__ = ["Failure", "Flight", "Progress", "Workshop"]
 
 PATIENCE = 0.6
 """A computation younger than this (s) is let finish when a newer request comes, so that a
@@ -40,8 +40,6 @@ QUIET = 1.0
 LATE = 3.0
 """A draw that nobody wants any more is given up after this time (s)."""
 NICENESS = 10
-ONE_THREAD = 10**9
-"""More elements than any set has: the search keeps to one thread beside the page."""
 
 
 class Progress(NamedTuple):
@@ -157,7 +155,7 @@ def work(connection: Connection, parent: int) -> None:
     with contextlib.suppress(AttributeError, OSError):
         os.nice(NICENESS)
     from lozenge_engine.samples import take
-    from lozenge_engine.stages import Stages
+    from lozenge_engine.stages import ONE_THREAD, Stages
 
     stages = Stages(threads_from=ONE_THREAD)
     while True:

@@ -17,7 +17,7 @@ from concurrent.futures import (
 )
 from typing import Literal, NamedTuple
 
-from lozenge_engine.design import Design, child_seed
+from lozenge_engine.design import Design
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.notation import duration
 from lozenge_engine.realisation import Record, realise
@@ -101,10 +101,7 @@ def attempt(layout: Design, sprinkling: int, realisation: int) -> Record:
 
 
 def _failed(layout: Design, sprinkling: int, realisation: int, reason: str) -> Record:
-    own = layout.sprinklings[sprinkling]
-    seed = child_seed(
-        layout.setup.points.seed, kind=own.kind, density=own.density, realisation=realisation
-    )
+    seed = layout.seed(sprinkling, realisation)
     return Record(sprinkling, realisation, seed, 0.0, 0, math.nan, (), reason)
 
 

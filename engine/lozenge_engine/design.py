@@ -5,7 +5,6 @@ from __future__ import annotations
 import hashlib
 import itertools
 import json
-import math
 from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any, NamedTuple
@@ -14,14 +13,12 @@ from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import PATCH_AREA, Region, check_regions
 from lozenge_engine.kernels import cuts
-from lozenge_engine.placement import mirror_images, scaled, with_separation
+from lozenge_engine.kernels.modes import DENSE_LIMIT
+from lozenge_engine.placement import abscissa, mirror_images, outline, scaled, with_separation
 from lozenge_engine.plan import AxisName, CampaignPlan
 from lozenge_engine.sections import sections_of
 
 __all__ = ["Cell", "Design", "Point", "Sprinkling", "child_seed", "design", "identity"]
-
-DENSE_LIMIT = 4000
-"""Most elements without a cut in the first stage, where every mode is needed."""
 
 
 class Point(NamedTuple):
@@ -107,6 +104,24 @@ class Design(NamedTuple):
     cells: tuple[Cell, ...]
     sprinklings: tuple[Sprinkling, ...]
     left_out: tuple[str, ...]
+
+    def seed(self, sprinkling: int, realisation: int) -> int:
+        """Child seed of one realisation; see `child_seed`.
+
+        Parameters
+        ----------
+        sprinkling, realisation : int
+            Which one.
+
+        Returns
+        -------
+        int
+            0 <= seed < 2**53.
+        """
+        own = self.sprinklings[sprinkling]
+        return child_seed(
+            self.setup.points.seed, kind=own.kind, density=own.density, realisation=realisation
+        )
 
 
 def child_seed(seed: int, *, kind: str, density: float, realisation: int) -> int:
@@ -285,14 +300,14 @@ def _cell(setup: Setup, point: int, placement: int, shift: tuple[float, float]) 
         regions = tuple(replace(r, t0=r.t0 + t, x0=r.x0 + x) for r in regions)
         check_regions(regions)
     density = setup.points.density
-    logs = [math.log(2 * r.half_width * math.sqrt(density)) for r in regions]
+    x, elements = abscissa(regions, density)
     return Cell(
         point,
         placement,
         replace(setup.config(), regions=regions),
         mirror_images(regions),
-        sum(logs) / len(logs),
-        min(r.area for r in regions) * density,
+        x,
+        elements,
     )
 
 
@@ -312,13 +327,7 @@ def _check_new(cell: Cell, others: list[Cell], plan: CampaignPlan) -> None:
 
 def _sets(cell: Cell) -> set[frozenset[tuple[float, ...]]]:
     """The sets of diamonds of a cell's layouts, up to rounding."""
-    return {
-        frozenset(
-            (round(r.t0, 9), round(r.x0, 9), round(r.half_width, 9), round(r.boost, 9))
-            for r in layout
-        )
-        for layout in cell.layouts
-    }
+    return {outline(layout) for layout in cell.layouts}
 
 
 def _shared(cells: list[Cell]) -> tuple[Sprinkling, ...]:

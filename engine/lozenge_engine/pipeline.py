@@ -26,6 +26,7 @@ from lozenge_engine.entropies import UNION_RULES, Block, Entropies, UnionRule
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import PATCH_AREA, Region
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
+from lozenge_engine.kernels.modes import DENSE_LIMIT
 from lozenge_engine.kernels.order import Commutator, MassiveCommutator, MasslessCommutator
 from lozenge_engine.kernels.points import Coordinates, membership, points_hash, sprinkle
 from lozenge_engine.pointfile import PointFile
@@ -51,8 +52,6 @@ __all__ = [
 FloatArray = NDArray[np.float64]
 Report = Callable[[str, float], None]
 
-DENSE_LIMIT = 4000
-"""Most elements for which every mode is computed (no cut in the first stage)."""
 MARGIN = 0.97
 """Floor of the search, as a multiple of the patch's cut: what lies between is shown as dropped."""
 MARGIN_LIMIT = 20_000

@@ -9,7 +9,15 @@ from dataclasses import replace
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import SLACK, Region, check_regions
 
-__all__ = ["gaps", "largest_mean_gap", "mirror_images", "scaled", "with_separation"]
+__all__ = [
+    "abscissa",
+    "gaps",
+    "largest_mean_gap",
+    "mirror_images",
+    "outline",
+    "scaled",
+    "with_separation",
+]
 
 
 def gaps(regions: tuple[Region, ...]) -> tuple[float, ...]:
@@ -101,6 +109,44 @@ def largest_mean_gap(regions: tuple[Region, ...]) -> float:
     return low * (1.0 - 1e-12)
 
 
+def abscissa(regions: tuple[Region, ...], density: float) -> tuple[float, float]:
+    """Where a layout stands in a fit of S against ln(l/a).
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout.
+    density : float
+        Elements per unit area.
+
+    Returns
+    -------
+    tuple of float
+        Mean over the regions of ln(l/a), l = 2 half_width, a = density**(-1/2); expected elements
+        of the smallest region.
+    """
+    x = sum(math.log(2 * r.half_width * math.sqrt(density)) for r in regions) / len(regions)
+    return x, min(r.area for r in regions) * density
+
+
+def outline(regions: tuple[Region, ...]) -> frozenset[tuple[float, ...]]:
+    """The set of diamonds of a layout, up to rounding and letters.
+
+    Parameters
+    ----------
+    regions : tuple of Region
+        One layout.
+
+    Returns
+    -------
+    frozenset of tuple of float
+        Equal for layouts of the same diamonds.
+    """
+    return frozenset(
+        (round(r.t0, 9), round(r.x0, 9), round(r.half_width, 9), round(r.boost, 9)) for r in regions
+    )
+
+
 def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]:
     """All distinct mirror images (x -> -x, t -> -t) of a set of regions, itself first.
 
@@ -118,7 +164,7 @@ def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]
         One to four layouts.
     """
     images: list[tuple[Region, ...]] = []
-    seen: set[frozenset[tuple[float, float, float, float]]] = set()
+    seen: set[frozenset[tuple[float, ...]]] = set()
     for sx, st in ((1, 1), (-1, 1), (1, -1), (-1, -1)):
         image = tuple(
             Region(
@@ -129,10 +175,7 @@ def mirror_images(regions: tuple[Region, ...]) -> tuple[tuple[Region, ...], ...]
             )
             for r in regions
         )
-        key = frozenset(
-            (round(r.t0, 12), round(r.x0, 12), round(r.half_width, 12), round(r.boost, 12))
-            for r in image
-        )
+        key = outline(image)
         if key not in seen:
             seen.add(key)
             images.append(image)

@@ -10,19 +10,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.config import PointSource
-from lozenge_engine.design import Design, child_seed
+from lozenge_engine.design import Design
 from lozenge_engine.errors import InputError
 from lozenge_engine.kernels.points import sprinkle
 from lozenge_engine.kernels.ranks import count_relations
 from lozenge_engine.samples import Draw, Reading, take
-from lozenge_engine.stages import Stages
+from lozenge_engine.stages import ONE_THREAD, Stages
 
 __all__ = ["Record", "Sample", "realise"]
 
 FloatArray = NDArray[np.float64]
-
-ONE_THREAD = 10**9
-"""More elements than any set has: realisations run beside each other, each in one thread."""
 
 
 class Sample(NamedTuple):
@@ -134,9 +131,7 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     `lozenge_engine.pipeline.compute` for each placement.
     """
     own = layout.sprinklings[sprinkling]
-    seed = child_seed(
-        layout.setup.points.seed, kind=own.kind, density=own.density, realisation=realisation
-    )
+    seed = layout.seed(sprinkling, realisation)
     source = PointSource(kind=layout.setup.points.kind, density=own.density, seed=seed)
     start = time.process_time()
     points = sprinkle(density=own.density, seed=seed, realisation=0, fixed=own.kind == "fixed")

@@ -9,9 +9,13 @@ from typing import Any, TypeVar
 
 import numpy as np
 
-__all__ = ["Stages"]
+__all__ = ["ONE_THREAD", "Stages"]
 
 T = TypeVar("T")
+
+
+ONE_THREAD = 10**9
+"""More elements than any set has: searches that run beside other work keep to one thread."""
 
 
 class Stages:

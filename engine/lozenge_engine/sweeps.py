@@ -6,7 +6,6 @@ fit.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal
@@ -44,7 +43,7 @@ from lozenge_engine.kernels.scaling import (
     fit_shared,
 )
 from lozenge_engine.pipeline import UNION_RULES
-from lozenge_engine.placement import gaps, with_separation
+from lozenge_engine.placement import abscissa, gaps, with_separation
 from lozenge_engine.samples import Reading
 
 __all__ = [
@@ -148,12 +147,6 @@ class SeparationCurve:
     note: str
 
 
-def _abscissa(regions: tuple[Region, ...], density: float) -> tuple[float, float]:
-    """Mean of ln(l/a) over the regions, and the expected elements of the smallest."""
-    x = sum(math.log(2 * r.half_width * math.sqrt(density)) for r in regions) / len(regions)
-    return x, min(r.area for r in regions) * density
-
-
 def ends_inside(regions: tuple[Region, ...]) -> int:
     """Left and right corners of regions inside the patch; shared corners do not count.
 
@@ -197,7 +190,7 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
     for draw, rung in zip(plan.draws, plan.point_of, strict=True):
         if readings.get(draw.key):
             rungs[rung].append(readings[draw.key])
-    places = [_abscissa(regions, float(density)) for density in plan.values]
+    places = [abscissa(regions, float(density)) for density in plan.values]
     samples = [_finite(column_of(rows, "union_support", None)) for rows in rungs]
     elements = np.array([n for _, n in places])
     big = elements >= setup.sweeps.smallest_region
@@ -263,7 +256,7 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         .reshape(len(sets), len(rows))
         .T
     )
-    places = [_abscissa(layout, setup.points.density) for layout in sets]
+    places = [abscissa(layout, setup.points.density) for layout in sets]
     x, elements = (np.array([place[i] for place in places]) for i in (0, 1))
     used = (elements >= setup.sweeps.smallest_region) & bool(rows)
     complete = table[np.isfinite(table[:, used]).all(axis=1)][:, used]

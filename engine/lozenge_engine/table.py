@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.checks import checked_number, checked_whole
-from lozenge_engine.design import Design, Sprinkling, child_seed
+from lozenge_engine.design import Design, Sprinkling
 from lozenge_engine.errors import refuse
 from lozenge_engine.plan import MAX_REALISATIONS
 from lozenge_engine.realisation import Record, Sample
@@ -149,12 +149,7 @@ def rows_of(record: Record, layout: Design) -> tuple[tuple[int, int], Row, list[
     checked_whole("realisation", record.realisation, low=0, high=MAX_REALISATIONS)
     checked_whole("elements", record.elements, low=0, high=2**53)
     checked_number("seconds", record.seconds, low=0.0, high=1e15, allowed="seconds from 0")
-    seed = child_seed(
-        layout.setup.points.seed,
-        kind=own.kind,
-        density=own.density,
-        realisation=record.realisation,
-    )
+    seed = layout.seed(record.sprinkling, record.realisation)
     if record.seed != seed or len(record.samples) != (0 if record.reason else len(own.cells)):
         raise refuse(
             f"realisation {record.realisation} of sprinkling {record.sprinkling}",

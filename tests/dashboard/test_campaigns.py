@@ -21,9 +21,9 @@ from panel.io.state import set_curdoc
 from lozenge_dashboard import campaign_board
 from lozenge_dashboard.campaign_board import (
     Asked,
-    error_words,
     forecast_words,
     foreseen,
+    refusal_words,
     sharing_words,
     worker_caution,
 )
@@ -401,11 +401,13 @@ def test_cost_of_campaigns_side_by_side_is_said(two_cores: None) -> None:
 
 
 def test_errors_lose_the_folder_and_what_is_said_twice(tmp_path: Path) -> None:
-    assert error_words(InputError(f"{tmp_path}/a.sqlite: given x"), tmp_path) == "a.sqlite: given x"
+    assert (
+        refusal_words(InputError(f"{tmp_path}/a.sqlite: given x"), tmp_path) == "a.sqlite: given x"
+    )
     inner = "half_width 0.5: region A: given out; allowed is in; move it."
     wrapped = f"axes: given {inner}; allowed is at least one point that fits; change the axes."
-    assert error_words(InputError(wrapped), tmp_path) == inner.replace("half_width", "half-width")
-    assert error_words(OSError("full"), tmp_path) == "OSError: full"
+    assert refusal_words(InputError(wrapped), tmp_path) == inner.replace("half_width", "half-width")
+    assert refusal_words(OSError("full"), tmp_path) == "OSError: full"
 
 
 # ---------------------------------------------------------------- the open campaign

@@ -29,7 +29,15 @@ from lozenge_engine.kernels.krylov import (
 from lozenge_engine.kernels.order import Commutator
 from lozenge_engine.kernels.skew import dense_pairs
 
-__all__ = ["Certificate", "Modes", "all_modes", "certified_modes", "certify", "find_modes"]
+__all__ = [
+    "DENSE_LIMIT",
+    "Certificate",
+    "Modes",
+    "all_modes",
+    "certified_modes",
+    "certify",
+    "find_modes",
+]
 
 FloatArray = NDArray[np.float64]
 
@@ -44,6 +52,10 @@ PROBES = 16
 """Random vectors that estimate the sum rule's total where it is not known exactly."""
 SUM_RULE_ERRORS = 5.0
 """Standard errors allowed to that estimate: one false alarm in a million."""
+
+
+DENSE_LIMIT = 4000
+"""Most elements for which `all_modes` is meant (no cut in the first stage)."""
 
 
 class Certificate(NamedTuple):
