@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import errno
+import gc
 import socket
 import sys
 import threading
@@ -28,6 +29,8 @@ FIRST_LIMIT = 5000
 one thread searches, since the sprinklings behind the picture need the other cores."""
 WARM_AFTER = 3.0
 """Seconds after the first page was loaded."""
+SWITCH = 1e-3
+"""Seconds after which a thread that computes lets the event loop in."""
 
 
 def free_port(wanted: int) -> int:
@@ -87,6 +90,18 @@ def _warm(stages: Stages) -> None:
     predict(Setup().config())
     warm()
     stages.compiled = True
+    _settle()
+
+
+def _settle() -> None:
+    """Keep the event loop from waiting: for a computing thread, or for the collector.
+
+    Called whenever libraries were loaded.  Without it every full collection walks their two
+    hundred thousand objects again, and no page is answered for a quarter of a second.
+    """
+    sys.setswitchinterval(SWITCH)
+    gc.collect()
+    gc.freeze()
 
 
 def _once(timer: threading.Timer) -> Callable[[], None]:
@@ -173,6 +188,7 @@ def serve(
             server = pn.serve(factories, **options)
             server.start()
             server.io_loop.asyncio_loop.set_exception_handler(_unless_gone)
+            _settle()
             _say(f"Lozenge is at {address} (Ctrl-C ends it).")
             if browser:
                 threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()

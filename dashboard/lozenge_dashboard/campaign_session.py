@@ -44,7 +44,7 @@ __all__ = ["Asked", "CampaignSession"]
 
 PERIOD = 1000
 """Milliseconds between two looks at the records."""
-REST = 4.0
+REST = 10.0
 """A file is read again after this many times what reading it took."""
 
 

@@ -15,8 +15,8 @@ ADDRESS = re.compile(r"http://127\.0\.0\.1:\d+/")
 
 
 @contextmanager
-def served(port: int) -> Iterator[str]:
-    """Serve the first preset on a port or the next free one; gives the address.
+def served(port: int, *preset: str) -> Iterator[str]:
+    """Serve a preset, or the first, on a port or the next free one; gives the address.
 
     The process is interrupted at the end, as with Ctrl-C, and has to end by itself.
     """
@@ -26,7 +26,7 @@ def served(port: int) -> Iterator[str]:
         "PYTHONUNBUFFERED": "1",
     }
     server = subprocess.Popen(
-        [sys.executable, "-c", START, "--no-browser", "--port", str(port)],
+        [sys.executable, "-c", START, *preset, "--no-browser", "--port", str(port)],
         stdout=subprocess.PIPE,
         text=True,
         env=environment,
