@@ -13,6 +13,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+from lozenge_dashboard.guard import guard
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import refuse
 from lozenge_engine.presets import FIRST, Preset, shipped
@@ -171,10 +172,11 @@ def serve(
     factories, close = pages(first, known, stages, path=path, ready=ready, loaded=_once(warming))
     import panel as pn
 
+    allowed = [f"{ADDRESS}:{chosen}", f"localhost:{chosen}"]
     options: dict[str, Any] = {
         "port": chosen,
         "address": ADDRESS,
-        "websocket_origin": [f"{ADDRESS}:{chosen}", f"localhost:{chosen}"],
+        "websocket_origin": allowed,
         "show": False,
         "title": "Lozenge",
         "verbose": False,
@@ -186,6 +188,7 @@ def serve(
         # asks for more threads where they pay.
         with blas_threads(1):
             server = pn.serve(factories, **options)
+            guard(server._tornado, allowed=allowed)
             server.start()
             server.io_loop.asyncio_loop.set_exception_handler(_unless_gone)
             _settle()
