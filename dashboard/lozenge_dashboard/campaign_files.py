@@ -10,13 +10,13 @@ from typing import Any
 
 from lozenge_dashboard.campaign_checks import controls, prediction, trusted
 from lozenge_engine.agreement import plain
-from lozenge_engine.design import child_seed
+from lozenge_engine.design import Design
 from lozenge_engine.estimates import CellEstimate, Estimates
 from lozenge_engine.geometry import region_letter
 from lozenge_engine.presets import dumps
 from lozenge_engine.store import Results, Table
 
-__all__ = ["results_document", "samples_csv"]
+__all__ = ["results_document", "sample_columns", "sample_rows", "samples_csv"]
 
 
 # ------------------------------------------------------------------------- JSON
@@ -105,12 +105,31 @@ def samples_csv(results: Results) -> Iterator[str]:
         form that reads back as the same double; fields that a row does not have are empty.
     """
     layout = results.design
-    names = [axis.name for axis in layout.plan.axes]
-    most = max(len(cell.config.regions) for cell in layout.cells)
+    yield ",".join(sample_columns(layout)) + "\n"
+    for g in range(len(layout.sprinklings)):
+        for row in sample_rows(layout, g, results.table(g)):
+            yield ",".join(row) + "\n"
+
+
+def sample_columns(layout: Design) -> list[str]:
+    """Names of the columns of a campaign's samples.
+
+    Parameters
+    ----------
+    layout : Design
+        The campaign.
+
+    Returns
+    -------
+    list of str
+        As many as the cell with the most regions needs.
+    """
+    most = _most(layout)
     letters = [region_letter(k) for k in range(most)]
     pairs = list(itertools.combinations(range(most), 2))
     head = ["kind", "patch_density", "realisation", "child_seed", "seconds", "patch_elements"]
-    head += ["ordering_fraction", *names, "placement_t", "placement_x", "trusted"]
+    head += ["ordering_fraction", *(axis.name for axis in layout.plan.axes)]
+    head += ["placement_t", "placement_x", "trusted"]
     head += [f"{a}_{what}" for a in letters for what in ("elements", "kept", "entropy")]
     head += ["union_support", "union_direct_sum"]
     head += [
@@ -118,16 +137,27 @@ def samples_csv(results: Results) -> Iterator[str]:
         for a, b in pairs
         for what in ("information_support", "information_direct_sum", "cross_block")
     ]
-    yield ",".join(head) + "\n"
-    for g in range(len(layout.sprinklings)):
-        yield from _rows(results, g, most=most)
+    return head
 
 
-def _rows(results: Results, sprinkling: int, *, most: int) -> Iterator[str]:
-    """The rows of one sprinkling: its realisations in order, its cells in order within them."""
-    layout, table = results.design, results.table(sprinkling)
+def sample_rows(layout: Design, sprinkling: int, table: Table) -> Iterator[list[str]]:
+    """Write samples of one sprinkling: realisations in order, its cells in order within them.
+
+    Parameters
+    ----------
+    layout : Design
+        The campaign.
+    sprinkling : int
+        Index of `Design.sprinklings`.
+    table : Table
+        Samples of it.
+
+    Yields
+    ------
+    list of str
+        One field for each of `sample_columns`.
+    """
     own = layout.sprinklings[sprinkling]
-    seed = results.preset.setup.points.seed
     shared = zip(
         table.realisation.tolist(),
         table.seconds.tolist(),
@@ -135,20 +165,25 @@ def _rows(results: Results, sprinkling: int, *, most: int) -> Iterator[str]:
         table.ordering_fraction.tolist(),
         strict=True,
     )
-    columns = [_columns(table, c, most=most) for c in range(len(own.cells))]
-    heads = [_cell_head(results, i) for i in own.cells]
+    columns = [_columns(table, c, most=_most(layout)) for c in range(len(own.cells))]
+    heads = [_cell_head(layout, i) for i in own.cells]
     for row, (realisation, seconds, elements, fraction) in enumerate(shared):
-        child = child_seed(seed, kind=own.kind, density=own.density, realisation=realisation)
+        child = layout.seed(sprinkling, realisation)
         front = [own.kind, own.density, realisation, child, seconds, int(elements), fraction]
         for head, column in zip(heads, columns, strict=True):
-            yield ",".join(map(_field, [*front, *head, *column[row]])) + "\n"
+            yield list(map(_field, [*front, *head, *column[row]]))
 
 
-def _cell_head(results: Results, cell: int) -> list[object]:
+def _most(layout: Design) -> int:
+    """Regions of the cell with the most."""
+    return max(len(cell.config.regions) for cell in layout.cells)
+
+
+def _cell_head(layout: Design, cell: int) -> list[object]:
     """Values of the axes and the placement."""
-    own = results.design.cells[cell]
-    values = results.design.points[own.point].values
-    return [*values.values(), *results.design.plan.placements[own.placement]]
+    own = layout.cells[cell]
+    values = layout.points[own.point].values
+    return [*values.values(), *layout.plan.placements[own.placement]]
 
 
 def _columns(table: Table, column: int, *, most: int) -> list[list[object]]:

@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
 import difflib
 import io
 import shlex
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, NoReturn
+from typing import TYPE_CHECKING, NamedTuple
 
-from lozenge_engine import __version__
+from lozenge_dashboard import parsers
 from lozenge_engine.errors import InputError, refuse
 
 if TYPE_CHECKING:
@@ -19,16 +20,8 @@ if TYPE_CHECKING:
 
 __all__ = ["find_preset", "main"]
 
-OK, BAD_INPUT, NOT_TRUSTED, STOPPED = 0, 2, 3, 130
-PRESET_HELP = "a preset file, or the name of one that comes with the program"
-WORKERS_HELP = "processes that compute a campaign, one thread each; as many as cores if not given"
-
-
-class _Parser(argparse.ArgumentParser):
-    """A parser that refuses in one line."""
-
-    def error(self, message: str) -> NoReturn:
-        raise InputError(f"{message}; see {self.prog} --help")
+OK, DIFFERENT, BAD_INPUT, NOT_TRUSTED, STOPPED = 0, 1, 2, 3, 130
+SQLITE = b"SQLite format 3\x00"
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -42,7 +35,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     Returns
     -------
     int
-        0 done; 2 bad input, with one line on stderr that says what to do; 3 computed, but the
+        0 done; 1 a bundle's numbers did not come out again; 2 bad input, with one line on stderr
+        that says what to do; 3 computed, but the
         certificate is not met, a number carries a mark or a realisation failed; 130 stopped, or
         a campaign paused, by Ctrl-C.
     """
@@ -63,146 +57,6 @@ def _say(text: str, status: int) -> int:
     """Write one line to stderr."""
     sys.stderr.write(f"lozenge: {' '.join(text.split())}\n")
     return status
-
-
-def _dispatch(given: list[str]) -> int:
-    if given[:1] == ["run"]:
-        return _run(_run_parser().parse_args(given[1:]))
-    if given[:1] == ["plan"]:
-        return _plan(_plan_parser().parse_args(given[1:]))
-    if given[:1] == ["results"]:
-        return _results(_results_parser().parse_args(given[1:]))
-    if given[:1] == ["presets"]:
-        return _list(_presets_parser().parse_args(given[1:]))
-    return _serve(_serve_parser().parse_args(given))
-
-
-# -------------------------------------------------------------------------- parsers
-
-
-def _serve_parser() -> _Parser:
-    parser = _Parser(
-        prog="lozenge",
-        description="Entanglement entropy of sprinkled causal diamonds. Opens the page in the "
-        "browser; only this machine can reach it.",
-        epilog="Further commands: 'lozenge run PRESET' computes a preset without the page; "
-        "'lozenge plan PRESET' says what its campaign will take, 'lozenge run PRESET --results "
-        "FILE' runs it, 'lozenge results FILE' prints what it found; 'lozenge presets' lists the "
-        "presets that come with the program. Each knows --help.",
-    )
-    parser.add_argument("-V", "--version", action="version", version=f"lozenge {__version__}")
-    parser.add_argument("preset", metavar="PRESET", nargs="?", help=PRESET_HELP)
-    parser.add_argument("--no-browser", action="store_true", help="serve without opening a tab")
-    parser.add_argument(
-        "--port",
-        type=_port,
-        metavar="N",
-        help="port to serve on; if it is busy the next free one is taken, and said",
-    )
-    return parser
-
-
-def _run_parser() -> _Parser:
-    parser = _Parser(
-        prog="lozenge run",
-        description="Compute a preset and print its numbers: the sprinkling of its seed, and the "
-        "mean over its sprinklings; or, with --results, run its campaign, which Ctrl-C pauses and "
-        "the same command goes on with.",
-        epilog="Exit status: 0 done; 2 bad input; 3 computed, but the certificate is not met, a "
-        "number carries a mark or a realisation failed; 130 stopped, or a campaign paused, by "
-        "Ctrl-C.",
-    )
-    parser.add_argument("preset", metavar="PRESET", help=PRESET_HELP)
-    parser.add_argument(
-        "--points",
-        type=Path,
-        metavar="CSV",
-        help="own points instead of a sprinkling: a CSV file with columns t and x",
-    )
-    parser.add_argument(
-        "--one", action="store_true", help="only the sprinkling of the seed, no mean"
-    )
-    parser.add_argument(
-        "--sweeps",
-        action="store_true",
-        help="also the sweeps of density, size and separation, with their fits",
-    )
-    parser.add_argument(
-        "--json",
-        type=Path,
-        metavar="FILE",
-        help="write the numbers as JSON; - for the standard output, instead of the table",
-    )
-    parser.add_argument(
-        "--arrays",
-        type=Path,
-        metavar="FILE.npz",
-        help="write the points, the eigenvalues and kept masks of both stages and the "
-        "symplectic values as NumPy arrays",
-    )
-    parser.add_argument(
-        "--results",
-        type=Path,
-        metavar="FILE",
-        help="run the preset's campaign into this results file, or go on with it",
-    )
-    parser.add_argument("--workers", type=int, metavar="N", help=WORKERS_HELP)
-    parser.add_argument(
-        "--dask",
-        metavar="ADDRESS",
-        help="have the workers of this Dask scheduler compute the campaign",
-    )
-    return parser
-
-
-def _plan_parser() -> _Parser:
-    parser = _Parser(
-        prog="lozenge plan",
-        description="Say what a preset's campaign will take: its points, predicted time and "
-        "memory, and what will be left out.",
-    )
-    parser.add_argument("preset", metavar="PRESET", help=PRESET_HELP)
-    parser.add_argument("--workers", type=int, metavar="N", help=WORKERS_HELP)
-    return parser
-
-
-def _results_parser() -> _Parser:
-    parser = _Parser(
-        prog="lozenge results",
-        description="Print what a results file holds, finished or not, also while it is written.",
-        epilog="Exit status: 0 done; 2 bad input; 3 a sample's certificate is not met, a number "
-        "carries a mark or a realisation failed.",
-    )
-    parser.add_argument("file", type=Path, metavar="FILE", help="the results file of a campaign")
-    parser.add_argument(
-        "--json",
-        type=Path,
-        metavar="FILE",
-        help="write the numbers as JSON; - for the standard output, instead of the report",
-    )
-    parser.add_argument(
-        "--csv",
-        type=Path,
-        metavar="FILE",
-        help="write all samples as CSV; - for the standard output, instead of the report",
-    )
-    return parser
-
-
-def _presets_parser() -> _Parser:
-    parser = _Parser(
-        prog="lozenge presets", description="List the presets that come with the program."
-    )
-    parser.add_argument(
-        "name", metavar="NAME", nargs="?", help="print this one's file instead, to start from"
-    )
-    return parser
-
-
-def _port(text: str) -> int:
-    if text.isascii() and text.isdigit() and int(text) <= 65535:
-        return int(text)
-    raise argparse.ArgumentTypeError(f"given {text}; allowed is a whole number from 0 to 65535")
 
 
 # ------------------------------------------------------------------------- commands
@@ -292,6 +146,34 @@ def _results(options: argparse.Namespace) -> int:
     return OK if trusted else NOT_TRUSTED
 
 
+def _bundle(options: argparse.Namespace) -> int:
+    from lozenge_dashboard.bundle_run import bundle_of_preset, bundle_of_results, save_bundle
+    from lozenge_engine.document import check_writable
+
+    check_writable(options.to)
+    if _is_results(options.what):
+        made = bundle_of_results(Path(options.what))
+    else:
+        preset, _ = find_preset(options.what)
+        made = bundle_of_preset(preset)
+    save_bundle(made, options.to)
+    return OK
+
+
+def _is_results(name: str) -> bool:
+    """Whether a path is that of a results file, an SQLite database by its first bytes."""
+    with contextlib.suppress(OSError, ValueError), Path(name).open("rb") as file:
+        return file.read(len(SQLITE)) == SQLITE
+    return False
+
+
+def _verify(options: argparse.Namespace) -> int:
+    from lozenge_dashboard.bundle_run import USUAL, verify_bundle
+
+    count = None if options.all else USUAL if options.realisations is None else options.realisations
+    return OK if verify_bundle(options.file, realisations=count) else DIFFERENT
+
+
 def _list(options: argparse.Namespace) -> int:
     from lozenge_dashboard.run import put
     from lozenge_engine.presets import SHIPPED, dumps, shipped
@@ -352,3 +234,32 @@ def _no_preset(name: str, *, allowed: str) -> InputError:
         allowed=allowed,
         do=f"write {near[0]}" if near else "see lozenge presets",
     )
+
+
+# ------------------------------------------------------------------------- dispatch
+
+
+class _Command(NamedTuple):
+    """One command: its arguments and what it does."""
+
+    parser: Callable[[], argparse.ArgumentParser]
+    do: Callable[[argparse.Namespace], int]
+
+
+COMMANDS = {
+    "run": _Command(parsers.run_parser, _run),
+    "plan": _Command(parsers.plan_parser, _plan),
+    "results": _Command(parsers.results_parser, _results),
+    "bundle": _Command(parsers.bundle_parser, _bundle),
+    "verify": _Command(parsers.verify_parser, _verify),
+    "presets": _Command(parsers.presets_parser, _list),
+}
+SERVE = _Command(parsers.serve_parser, _serve)
+
+
+def _dispatch(given: list[str]) -> int:
+    """Do what the first word says; without a command the page is served."""
+    command = COMMANDS.get(given[0]) if given else None
+    rest = given if command is None else given[1:]
+    command = command or SERVE
+    return command.do(command.parser().parse_args(rest))
