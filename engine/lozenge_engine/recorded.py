@@ -16,7 +16,7 @@ from lozenge_engine.checks import checked_number
 from lozenge_engine.design import Design, design, identity
 from lozenge_engine.differences import campaign_in, check_same
 from lozenge_engine.document import parse_json
-from lozenge_engine.errors import InputError, refuse
+from lozenge_engine.errors import refuse
 from lozenge_engine.filelock import FileLock
 from lozenge_engine.pipeline import versions
 from lozenge_engine.plan import CampaignPlan
@@ -88,8 +88,9 @@ class Results:
     @property
     def versions(self) -> dict[str, str]:
         """Versions of the program that runs now, or when only looking on, of the last one."""
-        ((text,),) = self._rows("SELECT document FROM versions WHERE id = ?", self._version)
-        return self._versions_of(text)
+        with self._sound("its versions"):
+            ((text,),) = self._rows("SELECT document FROM versions WHERE id = ?", self._version)
+            return self._versions_of(text)
 
     def computed_with(self) -> tuple[tuple[dict[str, str], int], ...]:
         """Versions of the programs that recorded realisations, and how many each; oldest first."""
@@ -97,16 +98,15 @@ class Results:
             "SELECT document, count(*) FROM realisations JOIN versions"
             " ON versions.id = realisations.versions GROUP BY versions.id ORDER BY versions.id"
         )
-        return tuple((self._versions_of(text), count) for text, count in rows)
+        with self._sound("its versions"):
+            return tuple((self._versions_of(text), count) for text, count in rows)
 
     @property
     def predicted(self) -> tuple[tuple[float, float], ...]:
         """Seconds and bytes that one realisation of each sprinkling was expected to take."""
-        ((text,),) = self._rows("SELECT predicted FROM meta")
-        try:
+        with self._sound("its predictions"):
+            ((text,),) = self._rows("SELECT predicted FROM meta")
             return tuple((float(seconds), float(size)) for seconds, size in parse_json(text))
-        except (TypeError, ValueError) as error:
-            raise damaged(self.path, "its predictions") from error
 
     def replan(self, plan: CampaignPlan) -> None:
         """Set other realisations, target, budget or smallest region.
@@ -200,8 +200,9 @@ class Results:
     @property
     def elapsed(self) -> float:
         """Running time of the campaign so far in seconds, resumed runs together."""
-        ((seconds,),) = self._rows("SELECT elapsed FROM meta")
-        return float(seconds)
+        with self._sound("its running time"):
+            ((seconds,),) = self._rows("SELECT elapsed FROM meta")
+            return float(seconds)
 
     def done(self) -> set[tuple[int, int]]:
         """Sprinkling and realisation of all that is recorded, failed ones included."""
@@ -224,12 +225,11 @@ class Results:
 
     def failures(self) -> tuple[tuple[str, int], ...]:
         """Why realisations failed and how many each; most frequent first."""
-        return tuple(
-            self._rows(
-                "SELECT reason, count(*) FROM realisations WHERE status = 'failed'"
-                " GROUP BY reason ORDER BY count(*) DESC, reason"
-            )
+        found = self._rows(
+            "SELECT reason, count(*) FROM realisations WHERE status = 'failed'"
+            " GROUP BY reason ORDER BY count(*) DESC, reason"
         )
+        return tuple((str(reason), count) for reason, count in found)
 
     def table(self, sprinkling: int) -> Table:
         """Read all samples of a sprinkling.
@@ -270,10 +270,8 @@ class Results:
                 for cell in cells
             ]
         regions = [len(self._design.cells[cell].config.regions) for cell in cells]
-        try:
+        with self._sound():
             return arrays(realisations, samples, regions=regions)
-        except ValueError as error:
-            raise damaged(self.path, str(error)) from error
 
     # -- the end
 
@@ -317,6 +315,15 @@ class Results:
             )
         return self._open()
 
+    @contextlib.contextmanager
+    def _sound(self, what: str = "") -> Iterator[None]:
+        """Say that the file is damaged where what it holds cannot be taken."""
+        try:
+            yield
+        except (TypeError, ValueError, OverflowError) as error:
+            said = f"{what}: {error}" if what else str(error)
+            raise damaged(self.path, said) from error
+
     def _rows(self, query: str, *values: object) -> list[Any]:
         with self._turn, in_words(self.path):
             return self._open().execute(query, values).fetchall()
@@ -333,16 +340,14 @@ class Results:
             if self._connection is None and self._text:
                 return  # closed: as it was last
             found = self._rows("SELECT preset, identity FROM meta")
-            if not found:
+            if not found or not isinstance(found[0][0], str):
                 raise damaged(self.path, "it has no preset")
             text, known = found[0]
             if text == self._text:
                 return
-            try:
+            with self._sound("its preset"):
                 preset = parse(text)
                 layout = design(preset.setup, campaign_in(preset))
-            except InputError as error:
-                raise damaged(self.path, f"its preset: {error}") from error
             if identity(layout.setup, layout.plan) != known:
                 raise damaged(self.path, "its preset is not the one of its samples")
             self._text, self._preset, self._design = text, preset, layout
@@ -350,7 +355,8 @@ class Results:
     def _version_row(self) -> int:
         """The row of the running versions, made if need be; read only, the last that was made."""
         if self._lock is None:
-            return int(self._rows("SELECT max(id) FROM versions")[0][0])
+            with self._sound("its versions"):
+                return int(self._rows("SELECT max(id) FROM versions")[0][0])
         text = versions_text()
         with self._turn, in_words(self.path), transaction(self._writing()):
             if not self._rows("SELECT 1 FROM versions WHERE document = ?", text):

@@ -136,6 +136,9 @@ def in_words(path: Path) -> Iterator[None]:
             raise damaged(path, str(error)) from error
         given, allowed, do = _WORDS[code]
         raise refuse(str(path), given=given, allowed=allowed, do=do) from error
+    except UnicodeDecodeError as error:
+        # A damaged name in the file's own list of tables reaches Python undecoded.
+        raise damaged(path, "text that is not UTF-8") from error
 
 
 @contextlib.contextmanager
