@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import html
 import math
 import os
 import re
@@ -10,15 +9,12 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any, NamedTuple, cast
 
-import panel as pn
 from bokeh.document import Document
 
-from lozenge_dashboard.board import NumbersTable, Page, page_css
 from lozenge_dashboard.campaign_column import CampaignControls
 from lozenge_dashboard.campaign_text import EMPTY, columns, line_html, rows, words_html
 from lozenge_dashboard.campaigns import Campaigns, Status, Watch
-from lozenge_dashboard.controls import ASSETS
-from lozenge_dashboard.frame import Frame
+from lozenge_dashboard.frames import WIDE, Frames, Sheet
 from lozenge_dashboard.palette import Look, ThemeName
 from lozenge_dashboard.records import CampaignChoices
 from lozenge_dashboard.views.effort import CAMPAIGN_VIEWS
@@ -44,10 +40,7 @@ __all__ = [
 WRAPPED = re.compile(r"axes: given (.*: given .*); allowed is at least one .*", re.DOTALL)
 """The refusal of a plan around that of its first point."""
 
-
-def _css(name: str) -> str:
-    return (ASSETS / name).read_text(encoding="utf-8")
-
+SHEET = Sheet("Campaign", "Points as a table", "campaign.css", "off", unfolded=True)
 
 NO_FORECAST: dict[str, Any] = {
     "text": "",
@@ -70,7 +63,7 @@ class Asked(NamedTuple):
     """That something of the address is not known."""
 
 
-class CampaignBoard:
+class CampaignBoard(Frames):
     """All panes of one campaign page.
 
     Parameters
@@ -90,44 +83,11 @@ class CampaignBoard:
         *,
         state: dict[str, Any],
     ) -> None:
-        wide: dict[str, Any] = {"sizing_mode": "stretch_width", "margin": 0}
-        self.controls = CampaignControls(receive, state=state, **wide)
-        self.line = pn.pane.HTML("", stylesheets=[_css("readings.css")], **wide)
-        self.words = pn.pane.HTML("", stylesheets=[_css("words.css")], **wide)
-        self.table = NumbersTable(columns=[], rows=[], **wide)
-        self.frames = {view.name: Frame(view, receive_view) for view in CAMPAIGN_VIEWS}
-        self._table_of: Watch | None = None
-
-    def template(self, *, then: Callable[[], None]) -> Page:
-        """Everything laid out as one page; `then` runs when the figures are in its document."""
-        page = Page(then, _css("campaign.html"))
-        page.add_variable("page_css", page_css() + "\n" + _css("campaign.css"))
-        page.add_variable(
-            "views",
-            [
-                {"name": name, "question": frame.view.question, "figures": list(frame.panes)}
-                for name, frame in self.frames.items()
-            ],
+        self.controls = CampaignControls(receive, state=state, **WIDE)
+        super().__init__(
+            SHEET, CAMPAIGN_VIEWS, controls=self.controls, receive_view=receive_view, words=True
         )
-        for name in ("controls", "line", "words", "table"):
-            page.add_panel(name, getattr(self, name))
-        for name, frame in self.frames.items():
-            page.add_panel(f"head_{name}", frame.head)
-            page.add_panel(f"foot_{name}", frame.foot)
-            for group, pane in frame.panes.items():
-                page.add_panel(f"figure_{group}", pane)
-        return page
-
-    def arrange(self, choices: CampaignChoices, focus: str | None, document: Document) -> None:
-        """Set every view's switch and give one view the room and the tools."""
-        for frame in self.frames.values():
-            frame.arrange(choices, focus)
-            frame.give_tools(focus, document)
-
-    def restyle(self, look: Look, document: Document) -> None:
-        """Take the colours of a theme."""
-        for frame in self.frames.values():
-            frame.restyle(look, document)
+        self._table_of: Watch | None = None
 
     def show(
         self,
@@ -155,12 +115,8 @@ class CampaignBoard:
         """Write the line of readings and the words below the figures."""
         self.line.object = line_html(watch, status)
         words = words_html(watch, status)
-        self.words.object = f"<div class='words'>{words}</div>" if words else ""
-
-    def stale(self, reason: str) -> None:
-        """Mark every view that it does not show the present state."""
-        for frame in self.frames.values():
-            frame.head.stale = html.escape(reason)
+        if self.words is not None:
+            self.words.object = f"<div class='words'>{words}</div>" if words else ""
 
 
 # ---------------------------------------------------------------- the prediction

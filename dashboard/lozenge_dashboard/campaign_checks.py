@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from lozenge_engine.estimates import Estimates
-from lozenge_engine.geometry import PATCH_AREA
+from lozenge_engine.kernels.curved import ordering_fraction
 from lozenge_engine.kernels.gls import Reduction, reduction
 from lozenge_engine.store import Results
 
@@ -32,7 +32,7 @@ def controls(results: Results) -> tuple[Reduction | None, ...]:
     """Try control variates on the entropy of every cell.
 
     The controls are the elements of the patch and of each region and the ordering fraction, whose
-    means are known: density times area, and one half.
+    means are known: density times volume, and one half in a flat patch.
 
     Parameters
     ----------
@@ -45,13 +45,20 @@ def controls(results: Results) -> tuple[Reduction | None, ...]:
         In the order of `Design.cells`; None with too few realisations.
     """
     layout = results.design
+    metric = layout.setup.points
+    related = ordering_fraction(curvature=metric.curvature, radius=metric.radius)
     found: dict[int, Reduction | None] = {}
     for g, own in enumerate(layout.sprinklings):
         table = results.table(g)
         patch = np.column_stack([table.elements.astype(float), table.ordering_fraction])
         for column, i in enumerate(own.cells):
-            areas = [region.area for region in layout.cells[i].config.regions]
-            known = [PATCH_AREA * own.density, 0.5, *(own.density * area for area in areas)]
+            config = layout.cells[i].config
+            source = config.points
+            if source.quasi_uniform:
+                found[i] = None  # nothing is drawn whose scatter could be taken out
+                continue
+            within = [source.elements(region) for region in config.regions]
+            known = [source.elements(), related, *within]
             inside = table.region_elements[column]
             tried = reduction(
                 table.union_support[:, column], np.hstack([patch, inside]), np.array(known)

@@ -12,7 +12,6 @@ from panel.custom import JSComponent
 from lozenge_dashboard.controls import ASSETS, FIELDS_JS, Field, Group, as_plain
 from lozenge_dashboard.proposal import Proposal
 from lozenge_engine.errors import InputError
-from lozenge_engine.geometry import PATCH_AREA
 from lozenge_engine.notation import thousands
 from lozenge_engine.plan import Axis, CampaignPlan
 
@@ -266,9 +265,11 @@ def _spread(proposal: Proposal) -> tuple[str, str]:
         return "", ""
     elements = ""
     if proposal.axis == "density":
-        low, high = (thousands(round(PATCH_AREA * end)) for end in (values[0], values[-1]))
+        source = proposal.base.setup.points
+        volume = source.elements() / source.density
+        low, high = (thousands(round(volume * end)) for end in (values[0], values[-1]))
         span = low if len(values) == 1 else f"{low} to {high}"
-        elements = f"N = {PATCH_AREA:g} × density: {span} elements expected"
+        elements = f"N = {volume:.4g} × density: {span} elements expected"
     said = [_short(value) for value in values]
     if len(said) > LISTED:
         said = [*said[: LISTED - 2], "…", said[-1]]

@@ -242,7 +242,7 @@ def setting_text(setup: Setup, varied: Collection[str]) -> str:
     str
         Points, regions, rules, mass and order; what is varied is left out.
     """
-    parts = [f"{setup.points.kind} points, seed {setup.points.seed}"]
+    parts = [f"{setup.points.kind} points, seed {setup.points.seed}", *setup.points.remarks()]
     if "density" not in varied:
         parts.append(f"density {setup.points.density:g}")
     if setup.region_list is not None:

@@ -280,9 +280,8 @@ def _closing(results: Results, found: Estimates) -> list[str]:
     lines += _prediction_text(results)
     made = results.computed_with() or ((results.versions, 0),)
     source = results.preset.setup.points
-    lines.append(
-        f"seed {source.seed}, {source.kind} points; each realisation has its own child seed"
-    )
+    points = ", ".join((f"{source.kind} points", *source.remarks()))
+    lines.append(f"seed {source.seed}, {points}; each realisation has its own child seed")
     for versions, count in made:
         text = ", ".join(f"{name} {version}" for name, version in versions.items())
         several = f" ({count} realisations)" if len(made) > 1 else ""

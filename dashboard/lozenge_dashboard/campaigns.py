@@ -26,7 +26,15 @@ from lozenge_engine.plan import CampaignPlan
 from lozenge_engine.presets import Preset
 from lozenge_engine.workers import Processes
 
-__all__ = ["LONGEST_NAME", "SUFFIX", "Campaigns", "Status", "Watch", "checked_name"]
+__all__ = [
+    "LONGEST_NAME",
+    "SUFFIX",
+    "Campaigns",
+    "Status",
+    "Watch",
+    "checked_name",
+    "results_names",
+]
 
 SUFFIX = ".sqlite"
 LONGEST_NAME = 100
@@ -70,6 +78,15 @@ def checked_name(text: object) -> str:
             do="leave out slashes, colons and a dot at the start",
         )
     return name if name.endswith(SUFFIX) else name + SUFFIX
+
+
+def results_names(folder: Path) -> list[str]:
+    """Results files of a folder, the latest first."""
+    found: list[tuple[float, str]] = []
+    with contextlib.suppress(OSError):
+        paths = [path for path in folder.glob(f"*{SUFFIX}") if path.is_file()]
+        found += [(-path.stat().st_mtime, path.name) for path in paths]
+    return [name for _, name in sorted(found)]
 
 
 class Status(NamedTuple):
@@ -243,11 +260,7 @@ class Campaigns:
 
     def names(self) -> list[str]:
         """Results files of the folder, the latest first."""
-        found: list[tuple[float, str]] = []
-        with contextlib.suppress(OSError):
-            paths = [path for path in self.folder.glob(f"*{SUFFIX}") if path.is_file()]
-            found += [(-path.stat().st_mtime, path.name) for path in paths]
-        return [name for _, name in sorted(found)]
+        return results_names(self.folder)
 
     def running(self) -> list[str]:
         """Those that run here, the latest first."""

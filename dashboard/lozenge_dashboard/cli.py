@@ -76,9 +76,15 @@ def _run(options: argparse.Namespace) -> int:
     _check_run(options)
     if options.results is not None:
         return _campaign(options)
+    preset, path = find_preset(options.preset)
+    if options.evidence:
+        from lozenge_dashboard.evidence_report import run_studies
+
+        folder = path.parent if path else None
+        done = run_studies(preset, folder=folder, points=options.points, json_file=options.json)
+        return OK if done else NOT_TRUSTED
     from lozenge_dashboard.run import run
 
-    preset, path = find_preset(options.preset)
     trusted = run(
         preset,
         folder=path.parent if path else None,
@@ -98,11 +104,16 @@ def _check_run(options: argparse.Namespace) -> None:
         names: tuple[str, ...] = ("workers", "dask")
         have, do = "without --results", "add --results FILE"
     else:
-        names = ("points", "one", "sweeps", "json", "arrays")
+        names = ("points", "one", "sweeps", "evidence", "json", "arrays")
         have, do = "with --results", "leave it out; see lozenge results --help for files"
     for name in names:
         if chosen[name] not in (None, False):
             raise refuse(f"--{name}", given=have, allowed="one or the other", do=do)
+    for name in ("one", "sweeps", "arrays") if options.evidence else ():
+        if chosen[name] not in (None, False):
+            raise refuse(
+                f"--{name}", given="with --evidence", allowed="one or the other", do="leave one out"
+            )
     if options.workers is not None and options.dask is not None:
         raise refuse(
             "--workers",
@@ -144,6 +155,31 @@ def _results(options: argparse.Namespace) -> int:
 
     trusted = show_results(options.file, json_file=options.json, csv_file=options.csv)
     return OK if trusted else NOT_TRUSTED
+
+
+def _evidence(options: argparse.Namespace) -> int:
+    from lozenge_dashboard.evidence_run import run_evidence
+
+    if options.as_is and options.results is None:
+        raise refuse("--as-is", given="without --results", allowed="both", do="add --results FILE")
+    preset, _ = find_preset(options.preset)
+    again = ["lozenge", "evidence", options.preset, "--results", str(options.results)]
+    told = run_evidence(
+        preset,
+        results=options.results,
+        json_file=options.json,
+        workers=options.workers,
+        level=options.level,
+        as_is=options.as_is,
+        resume_line=shlex.join(again),
+    )
+    if told.paused:
+        return STOPPED
+    return OK if told.trusted else NOT_TRUSTED
+
+
+def _export(options: argparse.Namespace) -> int:
+    raise NotImplementedError
 
 
 def _bundle(options: argparse.Namespace) -> int:
@@ -250,6 +286,8 @@ COMMANDS = {
     "run": _Command(parsers.run_parser, _run),
     "plan": _Command(parsers.plan_parser, _plan),
     "results": _Command(parsers.results_parser, _results),
+    "evidence": _Command(parsers.evidence_parser, _evidence),
+    "export": _Command(parsers.export_parser, _export),
     "bundle": _Command(parsers.bundle_parser, _bundle),
     "verify": _Command(parsers.verify_parser, _verify),
     "presets": _Command(parsers.presets_parser, _list),

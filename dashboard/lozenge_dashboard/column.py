@@ -6,14 +6,14 @@ import math
 from collections.abc import Mapping
 from typing import Any, NamedTuple
 
-from lozenge_dashboard.controls import GROUPS, LIVE_HIGH, LIVE_LOW, Field
+from lozenge_dashboard.controls import GROUPS, LIVE_HIGH, LIVE_LOW, VIEW_FIELDS, Field
 from lozenge_dashboard.settings import SETTINGS
 from lozenge_engine.bench import Bench, Limits
 from lozenge_engine.config import Setup
 from lozenge_engine.notation import duration
 from lozenge_engine.pipeline import DENSE_LIMIT
 
-__all__ = ["Behind", "Heading", "Job", "column_state"]
+__all__ = ["Behind", "Heading", "Job", "TwinNote", "column_state"]
 
 UNCUT = f"every mode is needed: at most {DENSE_LIMIT} elements"
 STAGES_OF = {
@@ -54,17 +54,31 @@ class Behind(NamedTuple):
     action: str = ""
 
 
+class TwinNote(NamedTuple):
+    """What is said at the switch of the twin: how far it is, or why there is none."""
+
+    text: str = ""
+    refused: bool = False
+    failed: bool = False
+
+    def state(self) -> dict[str, str]:
+        """As part of the control's state."""
+        if not self.text:
+            return {}
+        return {"disabled" if self.refused else "caution" if self.failed else "note": self.text}
+
+
 def column_state(
     bench: Bench,
     loaded: Setup,
     *,
-    union_rule: str,
-    loaded_union_rule: str,
+    view: Mapping[str, tuple[Any, Any]],
     errors: Mapping[str, str],
     seconds: Mapping[str, float],
     heading: Heading,
     job: Job,
     behind: Behind,
+    twin: TwinNote,
 ) -> dict[str, Any]:
     """Everything that the column shows.
 
@@ -74,14 +88,16 @@ def column_state(
         The present parameters.
     loaded : Setup
         The preset's, from which differences are marked.
-    union_rule, loaded_union_rule : str
-        The one control that belongs to the view, now and in the preset.
+    view : mapping of str to (value, value)
+        The controls that belong to the view (`VIEW_FIELDS`), now and in the preset.
     errors : mapping of str to str
         By control.
     seconds : mapping of str to float
         What each stage took when it last ran.
     heading, job, behind : Heading, Job, Behind
         The parts that are no controls.
+    twin : TwinNote
+        What is said at the switch of the twin.
 
     Returns
     -------
@@ -92,14 +108,15 @@ def column_state(
     fields: dict[str, dict[str, Any]] = {}
     for group in GROUPS:
         for field in group.fields:
-            if field.name == "union_rule":
-                now, then = union_rule, loaded_union_rule
+            if field.name in VIEW_FIELDS:
+                now, then = view[field.name]
             else:
                 setting = SETTINGS[field.name]
                 now, then = setting.get(setup), setting.get(loaded)
             fields[field.name] = _field_state(field, now, then, limits=limits, bench=bench)
             if field.name in errors:
                 fields[field.name]["error"] = errors[field.name]
+    fields["twin"] |= twin.state()
     differs = any("preset" in state for state in fields.values())
     return {
         "fields": fields,
@@ -152,9 +169,10 @@ def _ends(name: str, setup: Setup, limits: Limits) -> dict[str, float]:
         # The mass stays below 0.3 sqrt(density); without a first cut every mode is needed.
         low = math.ceil(2.0 * (setup.mass / 0.3) ** 2)
         uncut = setup.rules()[0].kind == "none"
+        most = DENSE_LIMIT * 2.0 * setup.points.density / setup.points.expected_points()
         return {
             "low": min(max(LIVE_LOW, low), LIVE_HIGH - 1),
-            "high": DENSE_LIMIT if uncut else LIVE_HIGH,
+            "high": max(math.floor(most + 1e-6), LIVE_LOW + 1) if uncut else LIVE_HIGH,
         }
     return {}
 
@@ -168,7 +186,7 @@ def _closed(name: str, setup: Setup, limits: Limits, bench: Bench) -> dict[Any, 
         }
     if name == "kind" and bench.file is None:
         return {"file": "open a points file first"}
-    if 2 * setup.points.density > DENSE_LIMIT:
+    if setup.points.expected_points() > DENSE_LIMIT:
         if name == "truncation_mode":
             return {"none": UNCUT, "regions_only": UNCUT}
         if name == "patch_kind":
@@ -186,6 +204,10 @@ def _hidden(name: str, setup: Setup) -> bool:
                 return rule.kind in ("none", "fixed_number")
             if name.endswith("_number"):
                 return rule.kind != "fixed_number"
-    if name == "alpha":
-        return setup.truncation_mode in ("custom", "none")
-    return name == "number" and setup.truncation_mode != "fixed_number"
+    hidden = {
+        "oversampling": not setup.points.quasi_uniform,
+        "radius": not setup.points.curved,
+        "alpha": setup.truncation_mode in ("custom", "none"),
+        "number": setup.truncation_mode != "fixed_number",
+    }
+    return hidden.get(name, False)

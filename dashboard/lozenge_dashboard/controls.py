@@ -17,6 +17,7 @@ __all__ = [
     "GROUPS",
     "POINTS_LIMIT",
     "PRESET_LIMIT",
+    "VIEW_FIELDS",
     "Controls",
     "Field",
     "Group",
@@ -118,7 +119,7 @@ POINTS = Group(
             "elements",
             "slider",
             "elements, mean",
-            "Expected elements in the patch, twice the density: the resolution of the spacetime.",
+            "Expected elements of a flat patch, twice the density: how fine the spacetime is.",
             low=LIVE_LOW,
             high=LIVE_HIGH,
             log=True,
@@ -128,14 +129,44 @@ POINTS = Group(
             "kind",
             "choice",
             "point set",
-            "How elements are placed: the count of a Poisson sprinkling fluctuates too.",
+            "How elements are placed: sprinkled, with or without a fluctuating count, or laid "
+            "evenly, without the noise of a sprinkling.",
             options=(
                 ("poisson", "Poisson sprinkling"),
                 ("fixed", "fixed count"),
+                ("lattice", "turned lattice"),
+                ("sobol", "Sobol set"),
                 ("file", "from file"),
             ),
         ),
+        Field(
+            "oversampling",
+            "number",
+            "oversampling",
+            "How many times more points are laid and cut at the same wavenumber: the more, the "
+            "nearer to the continuum.",
+            "times",
+            whole=True,
+        ),
         Field("seed", "number", "seed", "Another seed is another sprinkling.", whole=True),
+        Field(
+            "curvature",
+            "choice",
+            "curvature",
+            "Metric of the patch: the causal order stays, elements follow the volume.",
+            options=(
+                ("flat", "flat"),
+                ("positive", "positive (1/cos² t)"),
+                ("negative", "negative (1/cos² x)"),
+            ),
+        ),
+        Field(
+            "radius",
+            "number",
+            "curvature radius",
+            "The smaller, the more the volume grows towards the patch's corners.",
+            "half-widths",
+        ),
         Field(
             "mass",
             "slider",
@@ -270,7 +301,22 @@ SWEEPS = Group(
     ),
     folded=True,
 )
-GROUPS = (POINTS, REGIONS, MODES, AVERAGING, SWEEPS)
+REFERENCES = Group(
+    "References",
+    (
+        Field(
+            "twin",
+            "radio",
+            "continuum twin",
+            "The same geometry without sprinkling noise, as lines: quasi-uniform points of at "
+            "least four times the density, cut at the same wavenumber.",
+            options=((False, "off"), (True, "on")),
+        ),
+    ),
+)
+VIEW_FIELDS = ("union_rule", "twin")
+"""Controls that belong to the view and not to what is computed."""
+GROUPS = (POINTS, REGIONS, MODES, AVERAGING, REFERENCES, SWEEPS)
 
 
 def as_plain(group: Group) -> dict[str, Any]:
@@ -294,6 +340,7 @@ class Controls(JSComponent):
     )
 
     campaign = param.String(doc="Address of the campaign page for this screen.")
+    evidence = param.String(doc="Address of the evidence page for this screen.")
 
     _esm: ClassVar[str] = FIELDS_JS + (ASSETS / "controls.js").read_text(encoding="utf-8")
     _stylesheets: ClassVar[list[str]] = [(ASSETS / "controls.css").read_text(encoding="utf-8")]

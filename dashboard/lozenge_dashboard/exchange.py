@@ -103,6 +103,7 @@ def as_preset(loaded: Preset, setup: Setup, view: ViewState, result: Result | No
         invented=loaded.invented,
         setup=setup,
         campaign=loaded.campaign,
+        evidence=loaded.evidence,
         view=view,
         sender=sender,
     )

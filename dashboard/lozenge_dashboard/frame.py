@@ -45,8 +45,13 @@ class Head(JSComponent):
     question = param.String()
     options = param.List()
     choice = param.String()
+    toggles = param.List(doc="Name, label and hint of what may be shown beside.")
+    shown = param.List(doc="Names of those that are.")
     focused = param.Boolean()
     stale = param.String(doc="Why the picture is not the present one; empty if it is.")
+    fresh = param.Boolean(doc="Whether the picture is of the present state all the same.")
+    tall = param.Boolean(doc="Whether the switch has a row of its own.")
+    action = param.String(doc="What its button does, ``compute`` or ``cancel``; empty: no button.")
 
     _esm = ASSETS / "head.js"
     _stylesheets: ClassVar[list[str]] = [(ASSETS / "head.css").read_text(encoding="utf-8")]
@@ -88,9 +93,8 @@ def _place_ticks(axis: Axis, ticks: Sequence[tuple[float, str]] | None) -> None:
 class _Live:
     """One figure, built once by HoloViews and then fed through the data sources it made."""
 
-    def __init__(self, figure: Figure, *, square: bool) -> None:
+    def __init__(self, figure: Figure) -> None:
         self.figure = figure
-        self.square = square
         self.look: Look | None = None
         self.pane = pn.pane.HoloViews(
             None,
@@ -156,7 +160,7 @@ class _Live:
         if plot is None or limits is None:
             return
         self.limits = limits
-        shown = self._squared(limits, plot) if self.square else limits
+        shown = self._squared(limits, plot) if self.figure.square else limits
         for name, low, high in (("x_range", *shown[:2]), ("y_range", *shown[2:])):
             axis, last = getattr(plot, name), self._set.get(name)
             zoomed = last is not None and (axis.start, axis.end) != last
@@ -243,15 +247,21 @@ class Frame:
         What it shows.
     receive : callable
         Called with the view's name and a message of its head.
+    tall : bool
+        Whether the head has a second row for the switch.
     """
 
-    def __init__(self, view: View, receive: Callable[[str, dict[str, Any]], None]) -> None:
+    def __init__(
+        self, view: View, receive: Callable[[str, dict[str, Any]], None], *, tall: bool = False
+    ) -> None:
         self.view = view
         self.head = Head(
             lambda message: receive(view.name, message),
             key=view.name,
             question=view.question,
             options=[list(option) for option in view.options],
+            tall=tall,
+            toggles=[list(toggle) for toggle in view.toggles],
             sizing_mode="stretch_width",
             margin=0,
         )
@@ -261,11 +271,7 @@ class Frame:
             margin=0,
             stylesheets=[(ASSETS / "foot.css").read_text(encoding="utf-8")],
         )
-        self._live = {
-            choice: _Live(figure, square=view.name == "sprinkling")
-            for choice, figure in view.figures.items()
-        }
-
+        self._live = {choice: _Live(figure) for choice, figure in view.figures.items()}
         self._drawn: tuple[Any, ...] = ()
 
     @property
@@ -294,8 +300,14 @@ class Frame:
         for live in self._all():
             live.pane.visible = live is shown
         self.head.param.update(
-            choice=str(getattr(choices, self.view.name, "")), focused=focus == self.view.name
+            choice=str(getattr(choices, self.view.name, "")),
+            focused=focus == self.view.name,
+            shown=[name for name, *_ in self.view.toggles if getattr(choices, name)],
         )
+
+    def build(self, choices: Any, document: Document) -> None:
+        """Build the figure at the present switch, blank before its first record."""
+        self._shown(choices).build(document)
 
     def show(
         self, scene: Any, choices: Any, look: Look, document: Document, *, settled: bool

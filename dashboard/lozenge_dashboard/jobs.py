@@ -2,31 +2,32 @@
 
 `Flight` belongs to one page: at most one computation runs, and the latest request wins.
 `Workshop` belongs to the server: one process that takes draws from all pages in turn and keeps
-their readings, so that returning to a state costs nothing.
+their readings, so that returning to a state costs nothing.  Tasks (references: a twin, a chain)
+wait in the same line; unlike a draw they can be stopped without ending the process.
 """
 
 from __future__ import annotations
 
-import contextlib
 import multiprocessing
 import os
-import signal
 import threading
 import time
 from collections import OrderedDict
 from collections.abc import Callable, Iterable, Sequence
 from multiprocessing.connection import Connection
 from multiprocessing.process import BaseProcess
+from multiprocessing.synchronize import Event
 from typing import TYPE_CHECKING, Any, NamedTuple
 
+from lozenge_dashboard.worker import Failure, Outcome, Task, work
 from lozenge_engine.errors import Cancelled
-from lozenge_engine.workers import one_thread, watch_parent
+from lozenge_engine.workers import one_thread
 
 if TYPE_CHECKING:
     from lozenge_engine.pointfile import PointFile
     from lozenge_engine.samples import Draw, Reading
 
-__all__ = ["Failure", "Flight", "Progress", "Workshop"]
+__all__ = ["Failure", "Flight", "Progress", "Workshop", "keyed"]
 
 PATIENCE = 0.6
 """A computation younger than this (s) is let finish when a newer request comes, so that a
@@ -39,7 +40,6 @@ QUIET = 1.0
 """After work in front no new draw is begun for this time (s), so that the page stays fluid."""
 LATE = 3.0
 """A draw that nobody wants any more is given up after this time (s)."""
-NICENESS = 10
 
 
 class Progress(NamedTuple):
@@ -52,6 +52,16 @@ class Progress(NamedTuple):
 
 Report = Callable[[str, float], None]
 Work = Callable[[Report], Any]
+
+
+def keyed(key: object, task: Callable[..., Any], report: Report) -> tuple[object, Any]:
+    """What a task gives, or why it gives nothing, under the key that it was asked by."""
+    try:
+        return key, task(report=report)
+    except Cancelled:
+        raise
+    except Exception as error:  # noqa: BLE001 (shown in the page: nobody else would hear it)
+        return key, error
 
 
 class Flight:
@@ -131,53 +141,13 @@ class Flight:
         return report
 
 
-# ---------------------------------------------------------------- the worker process
-
-
-class Failure(NamedTuple):
-    """Why a draw has no readings."""
-
-    text: str
-
-
-def work(connection: Connection, parent: int) -> None:
-    """Take draws from a connection and send back their readings, until it closes.
-
-    Parameters
-    ----------
-    connection : Connection
-        Receives (draw, points) pairs; sends tuples of readings, or a `Failure`.
-    parent : int
-        Process whose end ends this one.
-    """
-    watch_parent(parent)
-    signal.signal(signal.SIGINT, signal.SIG_IGN)  # the server ends this process itself
-    with contextlib.suppress(AttributeError, OSError):
-        os.nice(NICENESS)
-    from lozenge_engine.samples import take
-    from lozenge_engine.stages import ONE_THREAD, Stages
-
-    stages = Stages(threads_from=ONE_THREAD)
-    while True:
-        try:
-            draw, points = connection.recv()
-        except (EOFError, OSError):
-            return
-        outcome: tuple[Reading, ...] | Failure
-        try:
-            outcome = take(draw, points=points, stages=stages)
-        except Exception as error:  # noqa: BLE001 (shown in the page: must not end the worker)
-            outcome = Failure(str(error))
-        try:
-            connection.send(outcome)
-        except OSError:
-            return
+# ---------------------------------------------------------------- what runs behind
 
 
 class _Queue(NamedTuple):
-    """What one page waits for: draws by their keys, in order."""
+    """What one page waits for: draws and tasks by their keys, in order."""
 
-    draws: dict[str, Draw]
+    draws: dict[str, Draw | Task]
     points: PointFile | None
     notify: Callable[[], None]
 
@@ -192,11 +162,14 @@ class Workshop:
     def __init__(self) -> None:
         self._changed = threading.Condition()
         self._queues: OrderedDict[object, _Queue] = OrderedDict()
-        self._cache: OrderedDict[str, tuple[Reading, ...] | Failure] = OrderedDict()
+        self._cache: OrderedDict[str, Outcome] = OrderedDict()
         self._thread: threading.Thread | None = None
         self._process: BaseProcess | None = None
         self._connection: Connection | None = None
+        self._stop: Event | None = None
         self._current: tuple[str, float] | None = None
+        self._eager = False  # whether a task may begin at once
+        self._soft = False  # whether what is being taken stops at its next report
         self._quiet_until = 0.0
         self._closed = False
 
@@ -217,7 +190,7 @@ class Workshop:
     def replace(
         self,
         page: object,
-        draws: Sequence[Draw],
+        draws: Sequence[Draw | Task],
         *,
         points: PointFile | None = None,
         notify: Callable[[], None],
@@ -228,7 +201,7 @@ class Workshop:
         ----------
         page : object
             Who asks; hashable.
-        draws : sequence of Draw
+        draws : sequence of Draw or Task
             In the order wanted; those known already are passed over.
         points : PointFile or None
             Imported points that the draws need.
@@ -239,6 +212,7 @@ class Workshop:
         with self._changed:
             waiting = {key: draw for key, draw in keyed.items() if key not in self._cache}
             self._queues.pop(page, None)
+            self._eager = True
             if waiting:
                 self._queues[page] = _Queue(waiting, points, notify)
                 if self._thread is None and not self._closed:
@@ -246,6 +220,19 @@ class Workshop:
                     self._thread.start()
             self._changed.notify()
         self._give_up(LATE)
+
+    def hold(self, page: object) -> None:
+        """Stop the task that is worked on for a page; it stays in line and is begun again."""
+        with self._changed:
+            self._eager = False
+            queue, current = self._queues.get(page), self._current
+            if queue is not None and current is not None and current[0] in queue.draws:
+                self._stop_task()
+
+    def _stop_task(self) -> None:
+        """Let the present task end at its next report."""
+        if self._soft and self._stop is not None:
+            self._stop.set()
 
     def remove(self, page: object) -> None:
         """Forget what a page waits for, and stop at once if it was working on that."""
@@ -258,12 +245,16 @@ class Workshop:
         known = self._known(keys)
         return {k: () if isinstance(v, Failure) else v for k, v in known.items()}
 
+    def outcomes(self, keys: Iterable[str]) -> dict[str, tuple[Any, ...]]:
+        """What tasks gave so far, by their key; empty for one that failed."""
+        return self.readings(keys)
+
     def failures(self, keys: Iterable[str]) -> list[str]:
         """Why draws failed, each reason once."""
         known = self._known(keys).values()
         return list(dict.fromkeys(v.text for v in known if isinstance(v, Failure)))
 
-    def _known(self, keys: Iterable[str]) -> dict[str, tuple[Reading, ...] | Failure]:
+    def _known(self, keys: Iterable[str]) -> dict[str, Outcome]:
         with self._changed:
             known = {key: self._cache[key] for key in keys if key in self._cache}
             for key in known:
@@ -285,7 +276,12 @@ class Workshop:
                 return
             key, start = self._current
             wanted = any(key in queue.draws for queue in self._queues.values())
-            if wanted or time.monotonic() - start < age:
+            if wanted:
+                return
+            if self._soft:
+                self._stop_task()
+                return
+            if time.monotonic() - start < age:
                 return
         self._terminate()
 
@@ -298,7 +294,7 @@ class Workshop:
         while True:
             with self._changed:
                 self._changed.wait_for(lambda: self._queues or self._closed)
-                while (left := self._quiet_until - time.monotonic()) > 0 and not self._closed:
+                while (left := self._patience()) > 0 and not self._closed:
                     self._changed.wait(left)
                 if self._closed:
                     return
@@ -308,9 +304,22 @@ class Workshop:
                 self._queues.move_to_end(page)
                 key, draw = next(iter(queue.draws.items()))
                 self._current = key, time.monotonic()
+                self._soft = hasattr(draw, "take")
+                if self._stop is not None:
+                    self._stop.clear()
             self._finish(key, self._take(draw, queue.points))
 
-    def _finish(self, key: str, outcome: tuple[Reading, ...] | Failure | None) -> None:
+    def _patience(self) -> float:
+        """Seconds to wait before the next draw; none before a task that a page has just asked for.
+
+        Such a page is at rest, and should it move again, `hold` stops the task.
+        """
+        queue = next(iter(self._queues.values()), None)
+        if self._eager and queue is not None and hasattr(next(iter(queue.draws.values())), "take"):
+            return 0.0
+        return self._quiet_until - time.monotonic()
+
+    def _finish(self, key: str, outcome: Outcome | None) -> None:
         """Store an outcome, and tell every page that waits for it; None: it was stopped."""
         told: list[Callable[[], None]] = []
         with self._changed:
@@ -329,12 +338,12 @@ class Workshop:
         for notify in told:
             notify()
 
-    def _take(self, draw: Draw, points: PointFile | None) -> tuple[Reading, ...] | Failure | None:
+    def _take(self, draw: Draw | Task, points: PointFile | None) -> Outcome | None:
         """Have the worker take a draw; None when it was stopped."""
         try:
             connection = self._worker()
             connection.send((draw, points))
-            outcome: tuple[Reading, ...] | Failure = connection.recv()
+            outcome: Outcome | None = connection.recv()
         except (EOFError, OSError):
             self._process = self._connection = None
             return None
@@ -345,8 +354,12 @@ class Workshop:
         if self._connection is None or self._process is None or not self._process.is_alive():
             context = multiprocessing.get_context("spawn")
             self._connection, theirs = context.Pipe()
+            self._stop = context.Event()
             self._process = context.Process(
-                target=work, args=(theirs, os.getpid()), name="sprinklings", daemon=True
+                target=work,
+                args=(theirs, os.getpid(), self._stop),
+                name="sprinklings",
+                daemon=True,
             )
             with one_thread():
                 self._process.start()

@@ -15,14 +15,15 @@ from lozenge_dashboard.exchange import points_beside
 from lozenge_dashboard.jobs import Workshop
 from lozenge_dashboard.session import Server, Session
 from lozenge_dashboard.views.catalogue import register_all
+from lozenge_engine.pointfile import PointFile
 from lozenge_engine.presets import Preset, ViewState
 from lozenge_engine.stages import Stages
 
 __all__ = ["pages"]
 
-CAMPAIGN = "/campaign"
+CAMPAIGN, EVIDENCE = "/campaign", "/evidence"
 KEPT_SCREENS = 200
-"""Pages of the bench that a campaign page can be opened from."""
+"""Pages of the bench that another page can be opened from."""
 FIRST_PATIENCE = 2.0
 """Longest time (s) that a page waits for the picture it opens with; later it comes by itself."""
 
@@ -56,7 +57,8 @@ def pages(
     Returns
     -------
     factories : dict of str to callable
-        By the address of the page: the bench and the campaigns; each returns a new page.
+        By the address of the page: the bench, the campaigns and the evidence; each returns a new
+        page.
     close : callable
         Ends the worker processes.
     """
@@ -67,13 +69,27 @@ def pages(
     register_all()
     server = Server(stages, Workshop(), shipped)
     points = points_beside(preset, path)
-    screens = _Screens(preset)
-    campaigns = _Campaigns(Path.cwd(), screens.get)
+    screens = _Screens(preset, points)
+    folder = Path.cwd()
+
+    def campaigns_made() -> _Made:
+        from lozenge_dashboard.campaign_page import campaign_pages
+
+        return campaign_pages(folder, lambda key: screens.get(key)[0])
+
+    def evidence_made() -> _Made:
+        from lozenge_dashboard.evidence_page import evidence_pages
+
+        return evidence_pages(folder, screens.get, stages)
+
+    others = {CAMPAIGN: _Later(campaigns_made), EVIDENCE: _Later(evidence_made)}
 
     def page() -> pn.Template:
         session = Session(server, preset, points=points)
         key = screens.add(session)
-        session.board.controls.campaign = f"{CAMPAIGN}?from={key}"
+        session.board.controls.param.update(
+            campaign=f"{CAMPAIGN}?from={key}", evidence=f"{EVIDENCE}?from={key}"
+        )
 
         def opened() -> None:
             session.open()
@@ -89,26 +105,31 @@ def pages(
         return session.board.template(then=session.draw_ahead)
 
     def close() -> None:
-        campaigns.close()
+        for other in others.values():
+            other.close()
         server.workshop.close()
 
-    return {"/": page, CAMPAIGN: campaigns.page}, close
+    return {"/": page, **{address: other.page for address, other in others.items()}}, close
+
+
+_Screen = tuple[Preset, PointFile | None]
+_Made = tuple[Callable[[], pn.Template], Callable[[], None]]
 
 
 class _Screens:
-    """What the pages of the bench show, by a key in the address of the campaign page."""
+    """What the pages of the bench show, by a key in the address of another page."""
 
-    def __init__(self, first: Preset) -> None:
-        self._first = first
-        self._now: OrderedDict[str, Callable[[], Preset]] = OrderedDict()
+    def __init__(self, first: Preset, points: PointFile | None) -> None:
+        self._first = first, points
+        self._now: OrderedDict[str, Callable[[], _Screen]] = OrderedDict()
 
     def add(self, session: Session) -> str:
         """Remember a page; gives its key."""
         key = secrets.token_urlsafe(8)
 
-        def now() -> Preset:
-            view = ViewState(theme=session.theme)
-            return session.desk.as_preset(view, None)
+        def now() -> _Screen:
+            view = ViewState(theme=session.theme, union_rule=session.choices.union_rule)
+            return session.desk.as_preset(view, None), session.bench.file
 
         self._now[key] = now
         while len(self._now) > KEPT_SCREENS:
@@ -121,27 +142,25 @@ class _Screens:
             last = self._now[key]()
             self._now[key] = lambda: last
 
-    def get(self, key: str) -> Preset:
-        """What a page shows; the server's first preset for one that is not known."""
+    def get(self, key: str) -> _Screen:
+        """What a page shows, with its imported points; the server's first for an unknown one."""
         return self._now[key]() if key in self._now else self._first
 
 
-class _Campaigns:
-    """The campaign pages, whose modules are imported when the first is asked for."""
+class _Later:
+    """Pages of one kind, whose modules are imported when the first is asked for."""
 
-    def __init__(self, folder: Path, screen: Callable[[str], Preset]) -> None:
-        self._folder, self._screen = folder, screen
-        self._made: tuple[Callable[[], pn.Template], Callable[[], None]] | None = None
+    def __init__(self, make: Callable[[], _Made]) -> None:
+        self._make = make
+        self._made: _Made | None = None
 
     def page(self) -> pn.Template:
-        """A new campaign page."""
+        """A new page."""
         if self._made is None:
-            from lozenge_dashboard.campaign_page import campaign_pages
-
-            self._made = campaign_pages(self._folder, self._screen)
+            self._made = self._make()
         return self._made[0]()
 
     def close(self) -> None:
-        """End the campaigns that run."""
+        """End what the pages have running."""
         if self._made is not None:
             self._made[1]()

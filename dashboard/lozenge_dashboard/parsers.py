@@ -11,6 +11,8 @@ from lozenge_engine.errors import InputError
 
 __all__ = [
     "bundle_parser",
+    "evidence_parser",
+    "export_parser",
     "plan_parser",
     "presets_parser",
     "results_parser",
@@ -38,9 +40,10 @@ def serve_parser() -> Parser:
         "browser; only this machine can reach it.",
         epilog="Further commands: 'lozenge run PRESET' computes a preset without the page; "
         "'lozenge plan PRESET' says what its campaign will take, 'lozenge run PRESET --results "
-        "FILE' runs it, 'lozenge results FILE' prints what it found; 'lozenge bundle' packs a "
-        "preset or results for somebody else, 'lozenge verify' computes a bundle again; 'lozenge "
-        "presets' lists the presets that come with the program. Each knows --help.",
+        "FILE' runs it, 'lozenge results FILE' prints what it found, 'lozenge evidence' sets it "
+        "beside independent routes; 'lozenge export' writes figures and tables; 'lozenge bundle' "
+        "packs a preset or results for somebody else, 'lozenge verify' computes a bundle again; "
+        "'lozenge presets' lists the presets that come with the program. Each knows --help.",
     )
     parser.add_argument("-V", "--version", action="version", version=f"lozenge {__version__}")
     parser.add_argument("preset", metavar="PRESET", nargs="?", help=PRESET_HELP)
@@ -79,6 +82,12 @@ def run_parser() -> Parser:
         "--sweeps",
         action="store_true",
         help="also the sweeps of density, size and separation, with their fits",
+    )
+    parser.add_argument(
+        "--evidence",
+        action="store_true",
+        help="instead: the cut study, derived thresholds, a mode, the checks of the state, mutual "
+        "information against the cross ratio, and slopes beside twin and chain",
     )
     parser.add_argument(
         "--json",
@@ -140,6 +149,61 @@ def results_parser() -> Parser:
         type=Path,
         metavar="FILE",
         help="write all samples as CSV; - for the standard output, instead of the report",
+    )
+    return parser
+
+
+def evidence_parser() -> Parser:
+    """Make the arguments of ``lozenge evidence``."""
+    parser = Parser(
+        prog="lozenge evidence",
+        description="Print the slopes of a preset's campaign beside independent routes: data, "
+        "continuum twin, harmonic chain, data minus twin, each with its error, and what the "
+        "difference is due to.",
+        epilog="Exit status: 0 done; 2 bad input; 3 a sample carries a mark or a realisation "
+        "failed; 130 the campaign was paused by Ctrl-C.",
+    )
+    parser.add_argument("preset", metavar="PRESET", help=PRESET_HELP)
+    parser.add_argument(
+        "--results",
+        type=Path,
+        metavar="FILE",
+        help="the campaign's results file: made, or gone on with, first; without it twin and "
+        "chain alone",
+    )
+    parser.add_argument(
+        "--as-is",
+        action="store_true",
+        help="read the results file as it is, finished or not",
+    )
+    parser.add_argument(
+        "--level",
+        metavar="LEVEL",
+        help="how the twin is made: exact (closed form), smooth (the same, averaged over counts), "
+        "or from sets: preview, refined, long",
+    )
+    parser.add_argument(
+        "--json",
+        type=Path,
+        metavar="FILE",
+        help="write the numbers as JSON; - for the standard output, instead of the table",
+    )
+    parser.add_argument("--workers", type=int, metavar="N", help=WORKERS_HELP)
+    return parser
+
+
+def export_parser() -> Parser:
+    """Make the arguments of ``lozenge export``."""
+    parser = Parser(
+        prog="lozenge export",
+        description="Write figures (SVG, PDF, PNG), tables (CSV, LaTeX), sources and a methods "
+        "paragraph of a preset or of a campaign's results.",
+    )
+    parser.add_argument("what", metavar="PRESET_OR_RESULTS", help=f"{PRESET_HELP}; or results")
+    parser.add_argument("--to", type=Path, metavar="DIR", required=True, help="folder to write to")
+    parser.add_argument("--views", metavar="A,B", help="only these views, by name")
+    parser.add_argument(
+        "--double", action="store_true", help="figures two columns wide instead of one"
     )
     return parser
 

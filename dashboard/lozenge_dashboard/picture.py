@@ -53,7 +53,9 @@ def picture_of(
             )
         result = compute(config, points=points, stages=stages, report=report)
         shown = min(CONTINUUM_MODES, 2 * result.patch.kept_modes + 20)
-        return Picture(setup, result, continuum_eigenvalues(config, shown))
+        return Picture(
+            setup, result, continuum_eigenvalues(config, shown, ratio=result.oversampling)
+        )
 
     return work
 

@@ -226,11 +226,12 @@ def readings_html(scene: Scene) -> str:
     near = [v for v in shown if v.kept is None and not v.far][:2]
     tiles += [_both_rules(group, group[0].name) for group in (union, near) if group]
     patch = scene.result.patch
+    held = "points" if scene.setup.points.quasi_uniform else "elements"
     tiles.append(
         _tile(
             "kept/nominal",
             f"{patch.kept_modes}/{patch.nominal_modes:.1f}",
-            f"patch, {thousands(scene.result.elements)} elements",
+            f"patch, {thousands(scene.result.elements)} {held}",
             mark="" if scene.result.certificate.met else " certificate not met",
         )
     )

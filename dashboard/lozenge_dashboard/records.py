@@ -13,10 +13,27 @@ from lozenge_engine.result import Result
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from lozenge_engine.crossratio import MutualRecord
+    from lozenge_engine.cutrecord import CutRecord
+    from lozenge_engine.due import DueRecord
+    from lozenge_engine.evidence import EvidencePlan
     from lozenge_engine.kernels.scaling import Estimate
+    from lozenge_engine.modeview import ModeRecord
+    from lozenge_engine.references import Company
+    from lozenge_engine.statecheck import StateRecord
     from lozenge_engine.sweeps import Average, ScalingCurve, SeparationCurve
+    from lozenge_engine.thresholds import ThresholdRecord
 
-__all__ = ["RULE_NAMES", "CampaignChoices", "Choices", "Scene", "Spread", "spread"]
+__all__ = [
+    "RULE_NAMES",
+    "CampaignChoices",
+    "Choices",
+    "EvidenceChoices",
+    "EvidenceScene",
+    "Scene",
+    "Spread",
+    "spread",
+]
 
 UnionRule = Literal["support", "direct_sum"]
 
@@ -31,12 +48,27 @@ class Choices(NamedTuple):
     entropies: Literal["values", "modes"] = "values"
     scaling: Literal["density", "size"] = "density"
     separation: Literal["mutual", "union"] = "mutual"
+    twin: bool = False
+    chain: bool = False
+    difference: bool = False
 
 
 class CampaignChoices(NamedTuple):
     """What the switches of a campaign's views say."""
 
     quantity: Literal["entropy", "mutual"] = "entropy"
+
+
+class EvidenceChoices(NamedTuple):
+    """What the switches of the evidence page's views say."""
+
+    cutstudy: Literal["entropy", "mutual", "slope", "kept", "modes"] = "entropy"
+    thresholds: Literal["patch", "regions", "union"] = "patch"
+    modeshape: Literal["real", "imaginary", "modulus"] = "real"
+    statecheck: Literal["fit", "deviation", "loss"] = "fit"
+    mutual: Literal["linear", "log"] = "linear"
+    due: Literal["slopes", "minus"] = "slopes"
+    union_rule: UnionRule = "support"
 
 
 class Spread(NamedTuple):
@@ -73,6 +105,8 @@ class Scene(NamedTuple):
         Exact eigenvalues of the patch in the continuum, massless.
     reference : Scene or None
         The scene kept for comparison.
+    beside : Company or None
+        The continuum twin and the harmonic chain, as far as they are wanted and known.
     """
 
     setup: Setup
@@ -83,3 +117,27 @@ class Scene(NamedTuple):
     separation: SeparationCurve | None = None
     continuum: NDArray[np.float64] = np.empty(0)
     reference: Scene | None = None
+    beside: Company | None = None
+
+
+class EvidenceScene(NamedTuple):
+    """What the evidence page shows at one moment; None where nothing is computed yet.
+
+    Attributes
+    ----------
+    setup : Setup
+        The geometry that the bench sent.
+    plan : EvidencePlan
+        What is asked about it.
+    cuts, thresholds, mode, state, mutual, due : record or None
+        What the six views are drawn from.
+    """
+
+    setup: Setup
+    plan: EvidencePlan
+    cuts: CutRecord | None = None
+    thresholds: ThresholdRecord | None = None
+    mode: ModeRecord | None = None
+    state: StateRecord | None = None
+    mutual: MutualRecord | None = None
+    due: DueRecord | None = None

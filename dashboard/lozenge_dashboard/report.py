@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from lozenge_dashboard.company import company_document, company_text
 from lozenge_dashboard.curves import (
     RULE_WORDS,
     RULES,
@@ -36,6 +37,7 @@ from lozenge_engine.notation import (
     with_scatter,
 )
 from lozenge_engine.presets import Preset, dumps
+from lozenge_engine.references import Company
 from lozenge_engine.result import PatchSpectrum, RegionResult, Result, UnionResult
 from lozenge_engine.sweeps import Average
 
@@ -64,6 +66,8 @@ class Outcome:
         With the numbers that came with the preset.
     curves : Curves or None
         The three sweeps.
+    beside : Company or None
+        The twin and the chain, where the preset's screen shows them.
     """
 
     preset: Preset
@@ -72,6 +76,7 @@ class Outcome:
     failures: tuple[str, ...] = ()
     agreement: Agreement | None = None
     curves: Curves | None = None
+    beside: Company | None = None
 
     @property
     def trusted(self) -> bool:
@@ -104,6 +109,8 @@ def table(outcome: Outcome) -> str:
         blocks.append(aligned(_information_rows(result, average)))
     if outcome.curves is not None:
         blocks.append(curves_text(outcome.curves))
+    if outcome.beside is not None:
+        blocks.append(company_text(outcome.beside, preset.setup, outcome.curves))
     lines = [_errors_line(preset.setup, average), _certificate_line(result)]
     lines += [f"caution: {text}" for text in (*cautions(preset.setup, result), *outcome.failures)]
     if outcome.agreement is not None:
@@ -116,9 +123,11 @@ def _heading(preset: Preset, result: Result) -> str:
     """Title, sentence and what was computed."""
     setup, source = preset.setup, preset.setup.points
     origin = f"points of {source.file}" if source.kind == "file" else f"seed {source.seed}"
+    held = f"{source.kind} points" if source.quasi_uniform else "elements"
     mass = f"mass {setup.mass:g}" if setup.mass else "massless"
     facts = [
-        f"{_count(result.elements)} elements, {origin}",
+        f"{_count(result.elements)} {held}, {origin}",
+        *source.remarks(),
         f"density {setup.points.density:g}",
         mass,
         f"truncation: {setup.truncation_mode.replace('_', ' ')}",
@@ -134,7 +143,8 @@ def _heading(preset: Preset, result: Result) -> str:
 def _entropy_rows(setup: Setup, result: Result, average: Average | None) -> list[Row]:
     """One row per region and two for the union: elements, kept modes beside nominal, S."""
     name = "S (nats)" if setup.order == 1 else f"S_{setup.order:g} (nats)"
-    head = ["", "elements", "kept/nominal", *_value_heads(name, average)]
+    held = "points" if setup.points.quasi_uniform else "elements"
+    head = ["", held, "kept/nominal", *_value_heads(name, average)]
     rows = [head, _patch_row(result.patch, result.elements, len(head))]
     for k, region in enumerate(result.regions):
         estimate = average.regions[k] if average else NO_ESTIMATE
@@ -214,9 +224,10 @@ def _errors_line(setup: Setup, average: Average | None) -> str:
         return "one sprinkling: no error is known"
     images = len(placements(setup, setup.regions()))
     each = f" (each over {images} mirror images of the regions)" if images > 1 else ""
+    one = {"lattice": "shift", "sobol": "scrambling"}.get(setup.points.kind, "sprinkling")
     return (
-        f"mean of {average.count} sprinklings{each} with its standard error in brackets; scatter "
-        "is the standard deviation of one sprinkling"
+        f"mean of {average.count} {one}s{each} with its standard error in brackets; scatter "
+        f"is the standard deviation of one {one}"
     )
 
 
@@ -255,10 +266,20 @@ def cautions(setup: Setup, result: Result) -> list[str]:
         if part.status != "ok"
     ]
     least = setup.sweeps.smallest_region
-    small = [k for k, r in enumerate(result.regions) if r.elements < least]
+    small = [k for k, r in enumerate(result.regions) if r.counted < least]
     if small:
-        held = ", ".join(f"{region_letter(k)} {result.regions[k].elements}" for k in small)
+        held = ", ".join(f"{region_letter(k)} {result.regions[k].counted:.0f}" for k in small)
         notes.append(f"fewer than {least} elements ({held}): not in the scaling regime")
+    if setup.points.quasi_uniform:
+        notes.append(
+            "quasi-uniform points have no sprinkling noise: the error is the scatter of shifts or "
+            "scramblings, and what more points change is not in it"
+        )
+    if setup.points.curved:
+        notes.append(
+            "curved patch: massless only; regions are diamonds in the coordinates, elements follow "
+            "the volume; a reference slope is set at short distance and stays"
+        )
     patch_rule, region_rule = setup.rules()
     if region_rule.kind == "none":
         notes.append("the regions' modes are not cut: S grows with the region's volume")
@@ -310,6 +331,8 @@ def document(outcome: Outcome) -> dict[str, Any]:
         made["agreement"] = outcome.agreement._asdict()
     if outcome.curves is not None:
         made["sweeps"] = curves_document(outcome.curves)
+    if outcome.beside is not None:
+        made["references"] = company_document(outcome.beside)
     return {
         **made,
         "seconds": dict(result.seconds),

@@ -13,9 +13,11 @@ from pathlib import Path
 
 import numpy as np
 
+from lozenge_dashboard.company import company_of
 from lozenge_dashboard.curves import Curves
 from lozenge_dashboard.report import Outcome, arrays, document, table
 from lozenge_engine import samples, sweeps
+from lozenge_engine.averages import Readings
 from lozenge_engine.config import Averaging, Config, PointSource, Setup
 from lozenge_engine.cost import predict
 from lozenge_engine.document import check_writable, write_bytes
@@ -28,7 +30,7 @@ from lozenge_engine.presets import Preset, compare
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
 
-__all__ = ["put", "run"]
+__all__ = ["computed", "own_points", "put", "run", "with_points"]
 
 STANDARD_OUTPUT = Path("-")
 COMPILED_FROM = 20_000
@@ -86,11 +88,11 @@ def run(
         raise refuse(
             str(json_file), given="one file twice", allowed="two files", do="change one name"
         )
-    own = _own_points(preset, folder, points)
-    effective = _with_points(preset, own)
+    own = own_points(preset, folder, points)
+    effective = with_points(preset, own)
     if one:
         effective = _with_sprinklings(effective, 1)
-    outcome = _compute(effective, own, with_sweeps=with_sweeps)
+    outcome = computed(effective, own, with_sweeps=with_sweeps)
     if preset.sender is not None:
         outcome = replace(outcome, agreement=compare(preset, outcome.result))
     _write(outcome, json_file, arrays_file)
@@ -126,7 +128,7 @@ def put(text: str) -> None:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
-def _own_points(preset: Preset, folder: Path | None, points: Path | None) -> PointFile | None:
+def own_points(preset: Preset, folder: Path | None, points: Path | None) -> PointFile | None:
     """The imported points: those given, or those that the preset names, beside its file."""
     source = preset.setup.points
     if points is not None:
@@ -153,7 +155,7 @@ def _own_points(preset: Preset, folder: Path | None, points: Path | None) -> Poi
     return own
 
 
-def _with_points(preset: Preset, own: PointFile | None) -> Preset:
+def with_points(preset: Preset, own: PointFile | None) -> Preset:
     """The preset on imported points, of which there is one set."""
     if own is None:
         return preset
@@ -174,7 +176,7 @@ def _with_sprinklings(preset: Preset, count: int) -> Preset:
     return replace(preset, setup=preset.setup.with_(averaging=averaging))
 
 
-def _compute(preset: Preset, own: PointFile | None, *, with_sweeps: bool) -> Outcome:
+def computed(preset: Preset, own: PointFile | None, *, with_sweeps: bool) -> Outcome:
     """The seed's own sprinkling, the mean over all of them, and the sweeps if wanted."""
     setup = preset.setup
     several = setup.averaging.sprinklings > 1
@@ -191,18 +193,23 @@ def _compute(preset: Preset, own: PointFile | None, *, with_sweeps: bool) -> Out
         for number, draw in enumerate(planned):
             work.take(number, draw)
     readings = work.readings
+    curves = _curves(setup, readings) if with_sweeps else None
     return Outcome(
         preset=preset,
         result=result,
         average=sweeps.average(setup, readings) if several else None,
         failures=tuple(work.failures),
-        curves=Curves(
-            density=sweeps.density_curve(setup, readings),
-            size=sweeps.size_curve(setup, readings),
-            separation=sweeps.separation_curve(setup, readings),
-        )
-        if with_sweeps
-        else None,
+        curves=curves,
+        beside=company_of(setup, preset.view, readings, curves),
+    )
+
+
+def _curves(setup: Setup, readings: Readings) -> Curves:
+    """The three sweeps."""
+    return Curves(
+        density=sweeps.density_curve(setup, readings),
+        size=sweeps.size_curve(setup, readings),
+        separation=sweeps.separation_curve(setup, readings),
     )
 
 
@@ -226,7 +233,7 @@ class _Work:
         sprinkling = (config.points, config.realisation)
         if sprinkling != self._sprinkling:
             self._sprinkling = sprinkling
-            compiled = PATCH_AREA * config.points.density >= COMPILED_FROM
+            compiled = config.points.expected_points() >= COMPILED_FROM
             self._stages = Stages(compiled=compiled)
         return self._stages
 

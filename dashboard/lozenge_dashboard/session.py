@@ -7,23 +7,24 @@ from typing import Any, NamedTuple, cast
 import panel as pn
 from bokeh.document import Document
 
-from lozenge_dashboard.behind import Backdrop
+from lozenge_dashboard.behind import Backdrop, Wanted
 from lozenge_dashboard.board import Board
 from lozenge_dashboard.column import Heading, Job, column_state
-from lozenge_dashboard.controls import LIVE_HIGH
+from lozenge_dashboard.controls import LIVE_HIGH, VIEW_FIELDS
 from lozenge_dashboard.desk import Desk
 from lozenge_dashboard.exchange import file_name
 from lozenge_dashboard.jobs import Flight, Progress, Workshop
 from lozenge_dashboard.palette import LOOKS
 from lozenge_dashboard.picture import Picture, modes_key, picture_of
-from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.records import Scene
+from lozenge_dashboard.switches import choices_of, switched, view_of
 from lozenge_dashboard.turn import Turn
 from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError
 from lozenge_engine.notation import duration, thousands
 from lozenge_engine.pipeline import predict
 from lozenge_engine.pointfile import PointFile
-from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps
+from lozenge_engine.presets import FIRST, Preset, compare, dumps
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
 
@@ -63,7 +64,7 @@ class Session:
         view = self.desk.preset.view
         self.theme = view.theme
         self.focus = view.focus
-        self.choices = _choices(view)
+        self.choices = choices_of(view)
         self.scene: Scene | None = None
         self.kept: Scene | None = None
         self.failure = ""
@@ -134,17 +135,24 @@ class Session:
             if message.get("kind") == "focus":
                 self.focus = None if self.focus == name else name  # type: ignore[assignment]
             elif message.get("kind") == "choose":
-                self.choices = self.choices._replace(**{name: message["value"]})
+                self._switch(name, message["value"])
+            elif message.get("kind") == "toggle":
+                self._switch(message["name"], message["value"])
             self.board.arrange(self.choices, self.focus, self.turn.document)
             self._paint()
             self._push()
 
+    def _switch(self, name: str, value: Any) -> None:
+        """Change a switch; references that it asks for are queued."""
+        self.choices = switched(self.choices, name, value)
+        self._settle()
+
     def _set(self, name: str, value: Any, *, settled: bool) -> None:
         """Change one control, or say at it why not."""
         self.settled = settled
-        if name == "union_rule":
-            self.choices = self.choices._replace(union_rule=value)
-            self._paint()
+        if name in VIEW_FIELDS:
+            self._switch(name, value)
+            self.board.arrange(self.choices, self.focus, self.turn.document)
             return
         before = self.bench.setup()
         setup = self.desk.put(name, value)
@@ -193,7 +201,7 @@ class Session:
         """Look as the preset says that was opened."""
         self.agreement, self.settled = "", True
         view = self.desk.preset.view
-        self.choices = _choices(view, self.choices)
+        self.choices = choices_of(view, self.choices)
         if arrange:
             self.focus = view.focus
             if self.theme != view.theme:
@@ -214,12 +222,7 @@ class Session:
         """Let the browser download the screen as a preset, with the numbers shown."""
         setup = self.bench.setup()
         shown = self.scene is not None and self.scene.setup == setup
-        view = ViewState(
-            theme=self.theme,
-            focus=self.focus,
-            union_rule=self.choices.union_rule,
-            scaling_axis=self.choices.scaling,
-        )
+        view = view_of(self.choices, theme=self.theme, focus=self.focus)
         preset = self.desk.as_preset(view, self.scene.result if shown and self.scene else None)
         try:
             self.board.controls.download(file_name(preset), dumps(preset))
@@ -240,6 +243,7 @@ class Session:
         self.job = Job()
         work = picture_of(setup, points=self.bench.file, stages=self.server.stages)
         self.server.workshop.wait()
+        self.backdrop.hold()
         self._computing = True
         self.picture.request(work)
 
@@ -331,7 +335,8 @@ class Session:
         setup = self.bench.setup()
         if self.scene is not None and self.scene.setup == setup:
             self._paint()
-            self.backdrop.settle(setup, self.bench.file, first=self.choices.scaling)
+            wanted = Wanted(setup, self.choices.twin, self.choices.chain)
+            self.backdrop.settle(wanted, self.bench.file, first=self.choices.scaling)
 
     def _gathered(self) -> None:
         """Show what came from behind."""
@@ -381,17 +386,12 @@ class Session:
         state = column_state(
             self.bench,
             preset.setup,
-            union_rule=self.choices.union_rule,
-            loaded_union_rule=preset.view.union_rule,
+            view={n: (getattr(self.choices, n), getattr(preset.view, n)) for n in VIEW_FIELDS},
             errors=self.desk.errors,
             seconds=self.seconds,
             heading=heading,
             job=self.job,
             behind=self.backdrop.progress,
+            twin=self.backdrop.twin_note(self.bench.setup(), twin=self.choices.twin),
         )
         return {**state, "answered": self._answered}
-
-
-def _choices(view: ViewState, before: Choices | None = None) -> Choices:
-    """The switches that a preset holds; the others stay."""
-    return (before or Choices())._replace(union_rule=view.union_rule, scaling=view.scaling_axis)

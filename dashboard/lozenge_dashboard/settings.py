@@ -10,6 +10,7 @@ from typing import Any, NamedTuple
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import PATCH_AREA, Region, region_letter
+from lozenge_engine.source import QUASI_UNIFORM
 
 __all__ = ["SETTINGS", "Setting"]
 
@@ -68,7 +69,8 @@ def _put_elements(setup: Setup, value: Any) -> Setup:
 
 def _put_kind(setup: Setup, value: Any) -> Setup:
     points = setup.points
-    changed = replace(points, kind=value, file=None, sha256=None)
+    times = points.oversampling if value in QUASI_UNIFORM else 1
+    changed = replace(points, kind=value, file=None, sha256=None, oversampling=times)
     return setup.with_(points=changed)
 
 
@@ -160,7 +162,10 @@ SETTINGS: Mapping[str, Setting] = MappingProxyType(
     {
         "elements": Setting(lambda s: round(s.points.density * PATCH_AREA, 6), _put_elements),
         "kind": Setting(lambda s: s.points.kind, _put_kind),
+        "oversampling": _within("points", "oversampling", _whole),
         "seed": _within("points", "seed", _whole),
+        "curvature": _within("points", "curvature", _word),
+        "radius": _within("points", "radius", _number),
         "mass": _plain("mass", _number),
         "region_count": Setting(lambda s: len(s.regions()), _put_count),
         "half_width": _plain("half_width", _number),

@@ -15,7 +15,6 @@ import numpy as np
 from lozenge_dashboard.campaign_files import sample_columns, sample_rows
 from lozenge_engine.agreement import TOLERANCE
 from lozenge_engine.bundle import Bundle
-from lozenge_engine.config import PointSource
 from lozenge_engine.design import Design, design
 from lozenge_engine.errors import refuse
 from lozenge_engine.pipeline import compute
@@ -301,8 +300,7 @@ def _nearest(layout: Design, key: Key) -> list[float]:
     """For each cell of a realisation how near a mode is to a cut, in all mirror images."""
     sprinkling, realisation = key
     own = layout.sprinklings[sprinkling]
-    seed = layout.seed(sprinkling, realisation)
-    source = PointSource(kind=layout.setup.points.kind, density=own.density, seed=seed)
+    source = layout.source(sprinkling, realisation)
     stages = Stages(threads_from=ONE_THREAD, compiled=True)
     found = []
     for i in own.cells:

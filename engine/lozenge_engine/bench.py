@@ -124,6 +124,9 @@ class Bench(Parameters):
         "elements",
         "seed",
         "kind",
+        "oversampling",
+        "curvature",
+        "radius",
         "regions",
         "sprinklings",
         watch=True,
@@ -201,6 +204,9 @@ class Bench(Parameters):
                     elements=source.density * PATCH_AREA,
                     seed=source.seed,
                     kind=source.kind,
+                    oversampling=source.oversampling,
+                    curvature=source.curvature,
+                    radius=source.radius,
                     regions=setup.region_list,
                     sprinklings=setup.averaging.sprinklings,
                     **{name: getattr(setup, name) for name in self._MIRRORED},
@@ -281,8 +287,8 @@ def _disagree(elements: float, density: float) -> InputError:
     )
 
 
-def continuum_eigenvalues(config: Config, count: int) -> FloatArray:
-    """Exact continuum eigenvalues of the patch's massless operator at the nominal density.
+def continuum_eigenvalues(config: Config, count: int, *, ratio: float = 1.0) -> FloatArray:
+    """Exact continuum eigenvalues of the flat patch's massless operator at the nominal density.
 
     Parameters
     ----------
@@ -290,10 +296,15 @@ def continuum_eigenvalues(config: Config, count: int) -> FloatArray:
         Its density is used; its mass is not.
     count : int
         How many, >= 1.
+    ratio : float
+        Points laid per element, `Result.oversampling`: eigenvalues are as many times larger.
 
     Returns
     -------
     ndarray, shape (count,), float64
-        Descending; see `lozenge_engine.kernels.laws.diamond_eigenvalues`.
+        Descending; see `lozenge_engine.kernels.laws.diamond_eigenvalues`.  Empty for a curved
+        patch, whose eigenvalues are not known in closed form.
     """
-    return diamond_eigenvalues(count, elements=PATCH_AREA * config.points.density)
+    if config.points.curved:
+        return np.empty(0)
+    return diamond_eigenvalues(count, elements=ratio * PATCH_AREA * config.points.density)

@@ -17,6 +17,7 @@ from lozenge_engine.checks import checked_number, checked_whole
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import MAX_REGIONS, PATCH_AREA, Region, check_regions, equal_row
 from lozenge_engine.placement import gaps, with_separation
+from lozenge_engine.source import MAX_ELEMENTS, MAX_SEED, PointSource
 
 __all__ = [
     "MAX_ELEMENTS",
@@ -32,11 +33,6 @@ __all__ = [
     "TruncationMode",
 ]
 
-MAX_SEED = 2**53
-MAX_ELEMENTS = 1_000_000
-"""Most elements a density may ask for: a guard against typing errors, not a promise of speed."""
-
-PointKind = Literal["poisson", "fixed", "file"]
 RuleKind = Literal["none", "root_count", "union_count", "equal_share", "fixed_number"]
 RULE_KINDS: tuple[RuleKind, ...] = get_args(RuleKind)
 TruncationMode = Literal[
@@ -49,52 +45,6 @@ TruncationMode = Literal[
     "fixed_number",
     "custom",
 ]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class PointSource:
-    """Where the elements come from.
-
-    Parameters
-    ----------
-    kind : {"poisson", "fixed", "file"}
-        Poisson sprinkling, a fixed count round(2 density), or imported points.
-    density : float
-        Elements per unit area, 1 to 500 000; the patch has area 2. For imported points N/2.
-    seed : int
-        0 <= seed < 2**53; not used for imported points.
-    file, sha256 : str or None
-        For imported points only: name of the file and hash of the point set.
-    """
-
-    kind: PointKind = "poisson"
-    density: float = 1000.0
-    seed: int = 1
-    file: str | None = None
-    sha256: str | None = None
-
-    def __post_init__(self) -> None:
-        if self.kind not in ("poisson", "fixed", "file"):
-            raise refuse(
-                "kind", given=self.kind, allowed="poisson, fixed or file", do="choose one of them"
-            )
-        high = MAX_ELEMENTS / PATCH_AREA
-        density = checked_number(
-            "density",
-            self.density,
-            low=1.0,
-            high=high,
-            allowed=f"1 to {high:g} elements per unit area (the patch has area 2)",
-        )
-        object.__setattr__(self, "density", density)
-        checked_whole("seed", self.seed, low=0, high=MAX_SEED - 1)
-        if (self.kind == "file") != (self.sha256 is not None):
-            raise refuse(
-                "points",
-                given=f"kind {self.kind} with sha256 {self.sha256}",
-                allowed="a hash of the points for kind file, and for no other kind",
-                do="load the points from their file",
-            )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -186,6 +136,13 @@ class Config:
             allowed=f"0 to 0.3 sqrt(density) = {high:.6g} inverse half-widths",
         )
         object.__setattr__(self, "mass", mass)
+        if mass > 0 and self.points.curved:
+            raise refuse(
+                "mass",
+                given=f"{mass:g} with {self.points.curvature} curvature",
+                allowed="0: curved patches are massless only",
+                do="set the mass to 0 or the curvature to flat",
+            )
         object.__setattr__(self, "regions", tuple(self.regions))
         check_regions(self.regions)
         if self.patch_rule.kind in ("union_count", "equal_share"):
@@ -200,7 +157,8 @@ class Config:
 
     def canonical_json(self) -> str:
         """The configuration as JSON with sorted keys and no spaces."""
-        return json.dumps(asdict(self), sort_keys=True, separators=(",", ":"), allow_nan=False)
+        plain = asdict(self) | {"points": self.points.plain()}
+        return json.dumps(plain, sort_keys=True, separators=(",", ":"), allow_nan=False)
 
     @property
     def digest(self) -> str:

@@ -64,12 +64,13 @@ class _Work(NamedTuple):
 
 def _counted(config: Config) -> _Work:
     """Leading costs of `find_modes`, `certify` and the second stage."""
-    n = PATCH_AREA * config.points.density
-    floor = cuts.needed_floor(config.patch_rule, elements=round(n))
+    n, counted = config.points.expected_points(), config.points.elements()
+    ratio = n / (PATCH_AREA * config.points.density) if config.points.quasi_uniform else 1.0
+    floor = cuts.needed_floor(config.patch_rule, elements=round(counted), ratio=ratio)
     if floor == 0.0:
         second = _second_stage(config, n / 2)
         return _Work(n, n, 9.0 * n**3, n, 16.0 * n**2, 48.0 * n**2 + BASE_BYTES, second)
-    r = min(n / 2, n / (2 * math.pi * floor))
+    r = min(n / 2, ratio * counted / (2 * math.pi * floor))
     m = min(n, modes.RATIO * r + 24)
     search = 2 * n * m**2 + 2 * n * m * r + 256 * n * m
     check = 2 * n * (m / 4) * (2 * r) + n * m**2 / 8 + 4 * n * r**2
@@ -93,8 +94,7 @@ def _second_stage(config: Config, r: float) -> float:
     numbers; so are pairs, triples and the union, whose modes are attributed by support.  The
     coefficients are measured (DEVELOPERS.md).
     """
-    density = config.points.density
-    elements = [region.area * density for region in config.regions]
+    elements = [config.points.expected_points(region) for region in config.regions]
     sizes = {k: itertools.combinations(elements, k) for k in {2, 3, len(elements)} - {1}}
     together = [sum(own) for k, blocks in sizes.items() if k <= len(elements) for own in blocks]
     flops = 0.0
@@ -189,7 +189,7 @@ def nominal(config: Config) -> Prediction:
 
 def _kind_of_work(config: Config) -> tuple[int, bool, str]:
     """Computations that share a correction: sizes within a factor of two, mass, first stage."""
-    elements = PATCH_AREA * config.points.density
+    elements = config.points.expected_points()
     return round(math.log2(elements)), config.mass > 0, config.patch_rule.kind
 
 

@@ -11,12 +11,13 @@ from typing import Any, NamedTuple
 
 from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError, refuse
-from lozenge_engine.geometry import PATCH_AREA, Region, check_regions
+from lozenge_engine.geometry import Region, check_regions
 from lozenge_engine.kernels import cuts
 from lozenge_engine.kernels.modes import DENSE_LIMIT
 from lozenge_engine.placement import abscissa, mirror_images, outline, scaled, with_separation
 from lozenge_engine.plan import AxisName, CampaignPlan
 from lozenge_engine.sections import sections_of
+from lozenge_engine.source import PointSource
 
 __all__ = ["Cell", "Design", "Point", "Sprinkling", "child_seed", "design", "identity"]
 
@@ -66,10 +67,10 @@ class Sprinkling(NamedTuple):
 
     Attributes
     ----------
-    kind : {"poisson", "fixed"}
-        How the elements are drawn.
+    kind : {"poisson", "fixed", "lattice", "sobol"}
+        How the elements are drawn, or laid out with a shift or scrambling for each realisation.
     density : float
-        Elements per unit area.
+        Elements per unit volume.
     cells : tuple of int
         Indices of `Design.cells`, those of one mass together, the deepest search first.
     """
@@ -122,6 +123,22 @@ class Design(NamedTuple):
         return child_seed(
             self.setup.points.seed, kind=own.kind, density=own.density, realisation=realisation
         )
+
+    def source(self, sprinkling: int, realisation: int) -> PointSource:
+        """The points of one realisation.
+
+        Parameters
+        ----------
+        sprinkling, realisation : int
+            Which one.
+
+        Returns
+        -------
+        PointSource
+            The setup's with the sprinkling's density and the child seed; its realisation 0.
+        """
+        seed = self.seed(sprinkling, realisation)
+        return replace(self.setup.points, density=self.sprinklings[sprinkling].density, seed=seed)
 
 
 def child_seed(seed: int, *, kind: str, density: float, realisation: int) -> int:
@@ -193,7 +210,7 @@ def design(setup: Setup, plan: CampaignPlan) -> Design:
             "points",
             given="imported points",
             allowed="sprinklings: a campaign repeats them",
-            do="choose poisson or fixed points",
+            do="choose points of another kind",
         )
     points, cells, left_out = [], [], []
     for combination in itertools.product(*(axis.values for axis in plan.axes)):
@@ -282,7 +299,7 @@ def _resized(setup: Setup, half_width: float, *, keep_gap: bool) -> Setup:
 
 
 def _check_dense(setup: Setup) -> None:
-    elements = PATCH_AREA * setup.points.density
+    elements = setup.points.expected_points()
     if setup.rules()[0].kind == "none" and elements > DENSE_LIMIT:
         raise refuse(
             "truncation",
@@ -299,8 +316,7 @@ def _cell(setup: Setup, point: int, placement: int, shift: tuple[float, float]) 
     if t or x:
         regions = tuple(replace(r, t0=r.t0 + t, x0=r.x0 + x) for r in regions)
         check_regions(regions)
-    density = setup.points.density
-    x, elements = abscissa(regions, density)
+    x, elements = abscissa(regions, setup.points)
     return Cell(
         point,
         placement,
@@ -344,5 +360,5 @@ def _shared(cells: list[Cell]) -> tuple[Sprinkling, ...]:
 
 def _depth(cell: Cell) -> tuple[float, float]:
     """Mass and floor of the patch's search: the deepest one comes first and serves the others."""
-    elements = round(PATCH_AREA * cell.config.points.density)
+    elements = round(cell.config.points.elements())
     return cell.config.mass, cuts.needed_floor(cell.config.patch_rule, elements=elements)

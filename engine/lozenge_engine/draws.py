@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import InputError
-from lozenge_engine.geometry import PATCH_AREA, Region, check_regions, largest_separation
+from lozenge_engine.geometry import Region, check_regions, largest_separation
 from lozenge_engine.pipeline import DENSE_LIMIT
 from lozenge_engine.placement import largest_mean_gap, mirror_images, scaled, with_separation
 from lozenge_engine.samples import Draw
@@ -137,13 +137,13 @@ def density_draws(setup: Setup) -> Plan:
     draws, rungs, left_out = [], [], []
     for j, density in enumerate(ladder):
         dense = setup.rules()[0].kind == "none"
-        if dense and PATCH_AREA * density > DENSE_LIMIT:
-            left_out.append(f"density {density:.4g}: no cut, over {DENSE_LIMIT} elements")
-            continue
         try:
             rung = setup.with_(points=replace(setup.points, density=float(density)))
         except InputError as error:
             left_out.append(f"density {density:.4g}: {error}")
+            continue
+        if dense and rung.points.expected_points() > DENSE_LIMIT:
+            left_out.append(f"density {density:.4g}: no cut, over {DENSE_LIMIT} elements")
             continue
         layouts = placements(setup, rung.regions())
         for r in range(realisations(setup)):

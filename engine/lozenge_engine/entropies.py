@@ -54,15 +54,23 @@ class Entropies:
     blocks : list of Block
         One for each region.
     elements : list of int
-        Elements of each region.
+        Points of each region.
+    counted : list of float
+        Elements that they stand for, `lozenge_engine.kernels.curved.Counting.elements`.
     """
 
     def __init__(
-        self, config: Config, patch_rank: int, blocks: list[Block], elements: list[int]
+        self,
+        config: Config,
+        patch_rank: int,
+        blocks: list[Block],
+        elements: list[int],
+        counted: list[float],
     ) -> None:
         self.config = config
         self.blocks = blocks
         self.elements = elements
+        self.counted = counted
         self.rank = patch_rank if config.patch_rule.kind != "none" else None
         self._singles: dict[int, Measured] = {}
         self._unions: dict[tuple[int, ...], dict[str, UnionResult]] = {}
@@ -90,11 +98,12 @@ class Entropies:
                 eigenvalues=block.spectrum.pairs.values,
                 kept=block.kept,
                 cut=block.cut,
-                nominal_modes=laws.nominal_modes(n),
+                nominal_modes=laws.nominal_modes(counted),
+                counted=counted,
                 **self._single(k)._asdict(),
             )
-            for k, (region, n, block) in enumerate(
-                zip(self.config.regions, self.elements, self.blocks, strict=True)
+            for k, (region, n, counted, block) in enumerate(
+                zip(self.config.regions, self.elements, self.counted, self.blocks, strict=True)
             )
         )
 

@@ -25,6 +25,7 @@ __all__ = [
     "FitOf",
     "Regime",
     "estimates",
+    "reference_slope",
     "target_error",
 ]
 
@@ -233,7 +234,7 @@ def _pair_column(config: Config) -> int | None:
 def _fit(layout: Design, tables: Sequence[Table], series: Series) -> FitOf:
     smallest = layout.plan.smallest_region
     regime = _regime(layout, tables, series)
-    reference, why_none = _reference(layout, series)
+    reference, why_none = reference_slope(layout, series)
     if not fittable(layout, series):
         sizes = {round(layout.cells[i].x, 9) for i in series.used}
         note = (
@@ -247,8 +248,23 @@ def _fit(layout: Design, tables: Sequence[Table], series: Series) -> FitOf:
     return FitOf(series, report, "", reference, why_none, regime)
 
 
-def _reference(layout: Design, series: Series) -> tuple[float | None, str]:
-    """Slope of the Calabrese-Cardy law, or why it says nothing here."""
+def reference_slope(layout: Design, series: Series) -> tuple[float | None, str]:
+    """Slope of the Calabrese-Cardy law, or why it says nothing here.
+
+    Parameters
+    ----------
+    layout : Design
+        The campaign.
+    series : Series
+        One of its fits.
+
+    Returns
+    -------
+    float or None
+        Per ln(l/a), in nats; None where the law does not apply.
+    str
+        Why not; empty with a slope.
+    """
     if series.axis != "density":
         return None, "region/patch changes along this axis"
     slopes = set()

@@ -21,6 +21,14 @@ from lozenge_engine.config import (
 from lozenge_engine.geometry import MAX_REGIONS, PATCH_AREA, largest_half_width, largest_separation
 from lozenge_engine.placement import largest_mean_gap
 from lozenge_engine.pointfile import PointFile
+from lozenge_engine.source import (
+    CURVATURES,
+    MAX_OVERSAMPLING,
+    MAX_RADIUS,
+    MIN_RADIUS,
+    POINT_KINDS,
+    QUASI_UNIFORM,
+)
 
 __all__ = ["Limits", "Parameters", "allowed_values"]
 
@@ -61,7 +69,7 @@ class Parameters(param.Parameterized):
     elements = param.Number(
         default=2500.0,
         doc="""
-        Expected elements of the patch, 2 density: setting it sets the density.""",
+        Twice the density, the expected elements of a flat patch: setting it sets the density.""",
     )
     seed = param.Integer(
         default=1,
@@ -71,9 +79,27 @@ class Parameters(param.Parameterized):
     )
     kind: Any = param.Selector(
         default="poisson",
-        objects=["poisson", "fixed", "file"],
+        objects=[*POINT_KINDS],
         doc="""
-        Poisson sprinkling, a fixed number of elements, or imported points.""",
+        Poisson sprinkling, a fixed number, quasi-uniform points, or imported points.""",
+    )
+    oversampling = param.Integer(
+        default=1,
+        bounds=(1, MAX_OVERSAMPLING),
+        doc="""
+        How many times more quasi-uniform points are laid, cut at the same wavenumber.""",
+    )
+    curvature: Any = param.Selector(
+        default="flat",
+        objects=[*CURVATURES],
+        doc="""
+        Metric of the patch: flat, or of constant positive or negative curvature; massless only.""",
+    )
+    radius = param.Number(
+        default=1.0,
+        bounds=(MIN_RADIUS, MAX_RADIUS),
+        doc="""
+        Curvature radius in patch half-widths; the larger, the flatter.""",
     )
     mass = param.Number(
         default=0.0,
@@ -182,8 +208,14 @@ class Parameters(param.Parameterized):
         if len(self.regions or range(self.region_count)) < 2:
             reasons["separation"] = "one region has no neighbour"
         if self.kind == "file":
-            for name in ("density", "elements", "seed", "sprinklings"):
+            for name in ("density", "elements", "seed", "sprinklings", "curvature", "radius"):
                 reasons[name] = "the points come from a file"
+        elif self.curvature == "flat":
+            reasons["radius"] = "the patch is flat"
+        else:
+            reasons["mass"] = "curved patches are massless only"
+        if self.kind not in QUASI_UNIFORM:
+            reasons["oversampling"] = "only quasi-uniform points are laid more densely"
         mode = self.truncation_mode
         if mode in ("none", "custom"):
             reasons["alpha"] = (
@@ -215,6 +247,9 @@ class Parameters(param.Parameterized):
             seed=self.seed,
             file=self._file.name if self.kind == "file" and self._file else None,
             sha256=self._file.sha256 if self.kind == "file" and self._file else None,
+            oversampling=self.oversampling if self.kind in QUASI_UNIFORM else 1,
+            curvature="flat" if self.kind == "file" else self.curvature,
+            radius=self.radius,
         )
         return Setup(
             points=points,

@@ -26,14 +26,14 @@ from lozenge_engine.entropies import UNION_RULES, Block, Entropies, UnionRule
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import PATCH_AREA, Region
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
+from lozenge_engine.kernels.curved import Counting, counting
+from lozenge_engine.kernels.laying import laid
 from lozenge_engine.kernels.modes import DENSE_LIMIT
 from lozenge_engine.kernels.order import Commutator, MassiveCommutator, MasslessCommutator
-from lozenge_engine.kernels.points import Coordinates, membership, points_hash, sprinkle
+from lozenge_engine.kernels.points import Coordinates, membership, points_hash
+from lozenge_engine.kernels.weighted import WeightedCommutator
 from lozenge_engine.pointfile import PointFile
-from lozenge_engine.result import (
-    PatchSpectrum,
-    Result,
-)
+from lozenge_engine.result import PatchSpectrum, Result
 from lozenge_engine.stages import Stages
 from lozenge_engine.threads import blas_threads
 
@@ -209,7 +209,8 @@ class _Computation:
                 )
             self.points_key: tuple[Any, ...] = ("file", file.sha256)
         else:
-            self.points_key = (source.kind, source.density, source.seed, config.realisation)
+            self.points_key = (source, config.realisation)
+        self.counting = Counting()
 
     @contextmanager
     def _timed(self, stage: str) -> Iterator[None]:
@@ -231,14 +232,19 @@ class _Computation:
                 self._spectrum(patch, region, own)
                 for region, own in zip(self.config.regions, rows, strict=True)
             ]
+        counted = [self.counting.elements(own) for own in rows]
         with self._timed("cut"):
             blocks = [
-                self._block(spectrum, own.size, region_of)
-                for spectrum, own in zip(spectra, rows, strict=True)
+                self._block(spectrum, own, sum(counted))
+                for spectrum, own in zip(spectra, counted, strict=True)
             ]
         with self._timed("entropies"):
             numbers = Entropies(
-                self.config, 2 * int(patch.kept.sum()), blocks, [own.size for own in rows]
+                self.config,
+                2 * int(patch.kept.sum()),
+                blocks,
+                [own.size for own in rows],
+                counted,
             )
             regions = numbers.regions()
             unions = numbers.union(tuple(range(len(blocks)))) if len(blocks) > 1 else {}
@@ -256,7 +262,7 @@ class _Computation:
                 eigenvalues=patch.modes.values,
                 kept=patch.kept,
                 cut=patch.cut,
-                nominal_modes=laws.nominal_modes(points.u.size),
+                nominal_modes=laws.nominal_modes(self.counting.total(points.u.size)),
                 floor=patch.modes.floor,
                 krylov_dimension=patch.modes.dimension,
             ),
@@ -268,6 +274,7 @@ class _Computation:
             total_correlation=total,
             seconds=dict(self.seconds),
             versions=versions(),
+            oversampling=self.counting.ratio,
         )
 
     def first_stage(self) -> tuple[Coordinates, str, NDArray[np.int8], _Patch]:
@@ -275,6 +282,7 @@ class _Computation:
         with self._timed("points"):
             points, sha256 = self.stages.get(("points", *self.points_key), self._points)[0]
             region_of = membership(points, self.config.regions)
+            self.counting = counting(points.u, points.v, source=self.config.points)
         with self._timed("order"):
             key = ("order", *self.points_key, self.config.mass)
             operator = self.stages.get(key, lambda: self._operator(points))[0]
@@ -291,27 +299,23 @@ class _Computation:
         """First stage of all: the elements and their hash."""
         if self.file is not None and self.config.points.kind == "file":
             return self.file.points, self.file.sha256
-        source = self.config.points
-        points = sprinkle(
-            density=source.density,
-            seed=source.seed,
-            realisation=self.config.realisation,
-            fixed=source.kind == "fixed",
-        )
+        points = laid(self.config.points, realisation=self.config.realisation)
         return points, points_hash(points)
 
     def _operator(self, points: Coordinates) -> Commutator:
         """The commutator on these elements."""
         if self.config.mass > 0:
-            return MassiveCommutator(
-                points.u, points.v, mass=self.config.mass, density=self.config.points.density
-            )
-        return MasslessCommutator(points.u, points.v, compiled=self.stages.compiled)
+            density = self.counting.ratio * self.config.points.density
+            return MassiveCommutator(points.u, points.v, mass=self.config.mass, density=density)
+        massless = MasslessCommutator(points.u, points.v, compiled=self.stages.compiled)
+        weights = self.counting.weights
+        return massless if weights is None else WeightedCommutator(massless, weights)
 
     def _patch(self, operator: Commutator) -> _Patch:
         """The patch's modes down to what the rule needs, extended if the cache holds fewer."""
         rule, n = self.config.patch_rule, operator.size
-        floor = cuts.needed_floor(rule, elements=n)
+        counted, ratio = self.counting.total(n), self.counting.ratio
+        floor = cuts.needed_floor(rule, elements=counted, ratio=ratio)
         if rule.kind == "fixed_number" and rule.number > n // 8:
             floor = 0.0  # deep in the spectrum a search costs more than all modes
         while True:
@@ -319,7 +323,7 @@ class _Computation:
             if rule.kind != "fixed_number" or found.values.size > rule.number or floor == 0.0:
                 break
             floor *= 0.8
-        cut = cuts.threshold(rule, own=n, union=n, regions=1)
+        cut = cuts.threshold(rule, own=counted, union=counted, regions=1, ratio=ratio)
         kept = cuts.keep(found.values, rule, cut=cut)
         if rule.kind == "fixed_number" and kept.any():
             cut = float(found.values[kept][-1])
@@ -369,16 +373,15 @@ class _Computation:
         key = ("restriction", *self.points_key, self.config.mass, kept.size, region, basis)
         return self.stages.get(key, make)[0]
 
-    def _block(
-        self, spectrum: gaussian.Spectrum, elements: int, region_of: NDArray[np.int8]
-    ) -> Block:
-        """What the regions' rule keeps of one region."""
+    def _block(self, spectrum: gaussian.Spectrum, own: float, union: float) -> Block:
+        """What the regions' rule keeps of one region, of `own` of the `union`'s elements."""
         rule = self.config.region_rule
         cut = cuts.threshold(
             rule,
-            own=elements,
-            union=int((region_of >= 0).sum()),
+            own=own,
+            union=union,
             regions=len(self.config.regions),
+            ratio=self.counting.ratio,
         )
         kept = cuts.keep(spectrum.pairs.values, rule, cut=cut)
         return Block(spectrum, cut, kept, gaussian.projected(spectrum, kept))

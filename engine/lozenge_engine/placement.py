@@ -8,6 +8,7 @@ from dataclasses import replace
 
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import SLACK, Region, check_regions
+from lozenge_engine.source import PointSource
 
 __all__ = [
     "abscissa",
@@ -109,24 +110,25 @@ def largest_mean_gap(regions: tuple[Region, ...]) -> float:
     return low * (1.0 - 1e-12)
 
 
-def abscissa(regions: tuple[Region, ...], density: float) -> tuple[float, float]:
+def abscissa(regions: tuple[Region, ...], source: PointSource) -> tuple[float, float]:
     """Where a layout stands in a fit of S against ln(l/a).
 
     Parameters
     ----------
     regions : tuple of Region
         One layout.
-    density : float
-        Elements per unit area.
+    source : PointSource
+        Density and metric.
 
     Returns
     -------
     tuple of float
-        Mean over the regions of ln(l/a), l = 2 half_width, a = density**(-1/2); expected elements
-        of the smallest region.
+        Mean over the regions of ln(l/a), l = 2 half_width in the coordinates, a = density**(-1/2);
+        expected elements of the smallest region.
     """
+    density = source.density
     x = sum(math.log(2 * r.half_width * math.sqrt(density)) for r in regions) / len(regions)
-    return x, min(r.area for r in regions) * density
+    return x, min(source.elements(r) for r in regions)
 
 
 def outline(regions: tuple[Region, ...]) -> frozenset[tuple[float, ...]]:

@@ -8,13 +8,15 @@ a fixed order of keys, two spaces, floats in their shortest form, a newline at t
 from __future__ import annotations
 
 import json
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 from lozenge_engine.agreement import Agreement, Sender, compare_numbers
-from lozenge_engine.config import PointSource, Setup
+from lozenge_engine.config import Setup
 from lozenge_engine.document import parse_json, read_bytes, write_bytes
+from lozenge_engine.errors import refuse
+from lozenge_engine.evidence import EvidencePlan
 from lozenge_engine.placement import gaps
 from lozenge_engine.plan import CampaignPlan
 from lozenge_engine.schema import FORMAT, FORMAT_KEY, check_document, folder
@@ -23,6 +25,8 @@ from lozenge_engine.sections import (
     at,
     campaign_of,
     campaign_section,
+    evidence_of,
+    evidence_section,
     sections_of,
     setup_of,
 )
@@ -36,6 +40,7 @@ __all__ = [
     "VIEWS",
     "Preset",
     "Sender",
+    "ViewName",
     "ViewState",
     "canonical",
     "compare",
@@ -53,6 +58,8 @@ SHIPPED = (
     "unequal-pair",
     "corner-region",
     "volume-law",
+    "rows-of-fifths",
+    "rows-of-tenths",
 )
 """Names of the presets that come with the program."""
 FIRST = "two-equal-regions"
@@ -77,12 +84,28 @@ class ViewState:
         Union rule that the curves follow.
     scaling_axis : {"density", "size"}
         Which of the two sweeps the scaling view shows.
+    twin, chain : bool
+        Whether the continuum twin is laid over the views, the harmonic chain over the scaling view.
+    difference : bool
+        Whether the scaling view shows data minus twin; only with the twin.
     """
 
     theme: Literal["light", "dark"] = "light"
     focus: ViewName | None = None
     union_rule: Literal["support", "direct_sum"] = "support"
     scaling_axis: Literal["density", "size"] = "density"
+    twin: bool = False
+    chain: bool = False
+    difference: bool = False
+
+    def __post_init__(self) -> None:
+        if self.difference and not self.twin:
+            raise refuse(
+                "view.difference",
+                given="true without the twin",
+                allowed="true where view.twin is true",
+                do="set view.twin to true",
+            )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -99,6 +122,8 @@ class Preset:
         Engine and sweep settings; brought to its `canonical` form.
     campaign : CampaignPlan or None
         What a campaign over this setup is to find out.
+    evidence : EvidencePlan or None
+        What the evidence page is to compute; None for its defaults.
     view : ViewState
         Arrangement of the page.
     sender : Sender or None
@@ -110,6 +135,7 @@ class Preset:
     invented: bool = False
     setup: Setup = field(default_factory=Setup)
     campaign: CampaignPlan | None = None
+    evidence: EvidencePlan | None = None
     view: ViewState = field(default_factory=ViewState)
     sender: Sender | None = None
 
@@ -149,7 +175,7 @@ def canonical(setup: Setup) -> Setup:
         changes |= {"patch_rule": DEFAULT.patch_rule, "region_rule": DEFAULT.region_rule}
     points = setup.points
     if points.kind != "file" and points.file is not None:
-        changes["points"] = PointSource(kind=points.kind, density=points.density, seed=points.seed)
+        changes["points"] = replace(points, file=None)
     return setup.with_(**changes)
 
 
@@ -190,7 +216,10 @@ def _document(preset: Preset) -> dict[str, Any]:
     }
     if preset.campaign is not None:
         document["campaign"] = campaign_section(preset.campaign)
-    document["view"] = asdict(preset.view)
+    if preset.evidence is not None:
+        document["evidence"] = evidence_section(preset.evidence)
+    # Switches that are off are left out, so that older files stay as they are.
+    document["view"] = {k: v for k, v in asdict(preset.view).items() if v is not False}
     if preset.sender is not None:
         document["sender"] = {
             "points_sha256": preset.sender.points_sha256,
@@ -242,6 +271,7 @@ def parse(text: str | bytes) -> Preset:
     document = parse_json(text)
     check_document(document)
     campaign = document.get("campaign")
+    evidence = document.get("evidence")
     sender = document.get("sender")
     return Preset(
         title=document["title"],
@@ -249,6 +279,7 @@ def parse(text: str | bytes) -> Preset:
         invented=document["invented"],
         setup=setup_of(document),
         campaign=None if campaign is None else campaign_of(campaign),
+        evidence=None if evidence is None else evidence_of(evidence),
         view=ViewState(**document["view"]),
         sender=Sender(**sender) if sender else None,
     )

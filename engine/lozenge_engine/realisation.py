@@ -9,10 +9,9 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from lozenge_engine.config import PointSource
 from lozenge_engine.design import Design
 from lozenge_engine.errors import InputError
-from lozenge_engine.kernels.points import sprinkle
+from lozenge_engine.kernels.laying import laid
 from lozenge_engine.kernels.ranks import count_relations
 from lozenge_engine.samples import Draw, Reading, take
 from lozenge_engine.stages import ONE_THREAD, Stages
@@ -131,10 +130,9 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     `lozenge_engine.pipeline.compute` for each placement.
     """
     own = layout.sprinklings[sprinkling]
-    seed = layout.seed(sprinkling, realisation)
-    source = PointSource(kind=layout.setup.points.kind, density=own.density, seed=seed)
+    source = layout.source(sprinkling, realisation)
     start = time.process_time()
-    points = sprinkle(density=own.density, seed=seed, realisation=0, fixed=own.kind == "fixed")
+    points = laid(source)
     n = points.u.size
     fraction = count_relations(points.u, points.v) / (n * (n - 1) / 2) if n > 1 else float("nan")
     samples: list[Sample] = []
@@ -157,7 +155,7 @@ def realise(layout: Design, sprinkling: int, realisation: int) -> Record:
     return Record(
         sprinkling,
         realisation,
-        seed,
+        source.seed,
         time.process_time() - start,
         n,
         fraction,

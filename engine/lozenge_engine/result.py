@@ -41,7 +41,8 @@ class PatchSpectrum:
         Threshold of the first stage; 0 for ``none``, the smallest kept eigenvalue for
         ``fixed_number``.
     nominal_modes : float
-        2 sqrt(N), the continuum count above the default threshold.
+        2 sqrt(n), the continuum count above the default threshold; n the elements that the points
+        stand for.
     floor : float
         Every eigenvalue above it was found, as far as the certificate says.
     krylov_dimension : int
@@ -70,7 +71,7 @@ class RegionResult:
     region : Region
         Its geometry.
     elements : int
-        Elements inside, n.
+        Points inside.
     eigenvalues : ndarray, shape (pairs,), float64
         Positive eigenvalues of the restricted operator, descending; pairs = min(n, 2 r) // 2 with
         r kept modes of the patch.
@@ -80,6 +81,9 @@ class RegionResult:
         Threshold of the second stage; 0 for ``none`` and ``fixed_number``.
     nominal_modes : float
         2 sqrt(n).
+    counted : float
+        Elements n that the points stand for in the rules: their number, divided by the
+        oversampling of quasi-uniform points, weighted by Omega^2 where these lie in a curved patch.
     symplectic : ndarray, shape (k,), float64
         Symplectic values s >= 1/2 up to rounding, descending, one for each kept mode; empty
         without an entropy.
@@ -99,6 +103,7 @@ class RegionResult:
     kept: BoolArray
     cut: float
     nominal_modes: float
+    counted: float
     symplectic: FloatArray
     contributions: FloatArray
     entropy: float
@@ -225,6 +230,9 @@ class Result:
         Wall time of each stage, next to 0 where the cache served it.
     versions : mapping of str to str
         Of Python, the libraries and this program.
+    oversampling : float
+        Points laid over those of the geometry at its density, f; not 1 for quasi-uniform sets
+        alone.  All eigenvalues and cuts are f times those of the geometry.
     """
 
     config: Config
@@ -241,6 +249,7 @@ class Result:
     total_correlation: Mapping[str, float]
     seconds: Mapping[str, float]
     versions: Mapping[str, str]
+    oversampling: float = 1.0
 
     @property
     def elements(self) -> int:
@@ -264,7 +273,7 @@ class Result:
             as it is; one count for each region.
         """
         rule = self.config.region_rule
-        union = sum(r.elements for r in self.regions)
+        union = sum(r.counted for r in self.regions)
         found: dict[str, tuple[int, ...]] = {}
         for kind in RULE_KINDS:
             other = Rule(kind=kind, alpha=rule.alpha, number=rule.number)
@@ -274,7 +283,11 @@ class Result:
                         r.eigenvalues,
                         other,
                         cut=cuts.threshold(
-                            other, own=r.elements, union=union, regions=len(self.regions)
+                            other,
+                            own=r.counted,
+                            union=union,
+                            regions=len(self.regions),
+                            ratio=self.oversampling,
                         ),
                     ).sum()
                 )
@@ -282,13 +295,18 @@ class Result:
             )
         return found
 
+    @property
+    def _held(self) -> str:
+        """What the points are called: those of a quasi-uniform set are no elements."""
+        return "points" if self.config.points.quasi_uniform else "elements"
+
     def _rows(self) -> list[tuple[str, str, str]]:
         """Name, value and kept over nominal modes of what a reader asks for first."""
         rows = [
             (
                 f"S({region_letter(k)})",
                 f"{r.entropy:.4f}" if r.status == "ok" else f"{r.entropy:.4f} ({r.status})",
-                f"{r.kept_modes} of {r.nominal_modes:.1f} modes, {r.elements} elements",
+                f"{r.kept_modes} of {r.nominal_modes:.1f} modes, {r.elements} {self._held}",
             )
             for k, r in enumerate(self.regions)
         ]
@@ -301,7 +319,8 @@ class Result:
 
     def __repr__(self) -> str:
         """One sprinkling's entropies in nats; their scatter between sprinklings is not in it."""
-        head = f"Result of {self.elements} elements, one sprinkling, entropies in nats"
+        one = "one set" if self.config.points.quasi_uniform else "one sprinkling"
+        head = f"Result of {self.elements} {self._held}, {one}, entropies in nats"
         mark = "" if self.certificate.met else " (certificate not met)"
         body = "".join(f"\n  {name:<20}{value:>10}   {more}" for name, value, more in self._rows())
         return head + mark + body

@@ -55,8 +55,10 @@ class Reading(NamedTuple):
 
     Attributes
     ----------
-    elements, kept : ndarray, shape (K,), int64
-        Elements and kept positive modes of each region.
+    elements : ndarray, shape (K,), float64
+        Elements of each region as the rules count them, `RegionResult.counted`.
+    kept : ndarray, shape (K,), int64
+        Kept positive modes of each region.
     entropy : ndarray, shape (K,), float64
         Of each region.
     union_support, union_direct_sum : float
@@ -68,7 +70,7 @@ class Reading(NamedTuple):
         Whether the certificate holds and no number carries a mark.
     """
 
-    elements: NDArray[np.int64]
+    elements: FloatArray
     kept: NDArray[np.int64]
     entropy: FloatArray
     union_support: float
@@ -95,7 +97,7 @@ def reading_of(result: Result) -> Reading:
     first = result.regions[0].entropy
     unions = result.unions
     return Reading(
-        elements=np.array([r.elements for r in result.regions], dtype=np.int64),
+        elements=np.array([r.counted for r in result.regions]),
         kept=np.array([r.kept_modes for r in result.regions], dtype=np.int64),
         entropy=np.array([r.entropy for r in result.regions]),
         union_support=unions["support"].entropy if unions else first,

@@ -9,11 +9,21 @@ from typing import Any
 
 from lozenge_engine.config import Averaging, PointSource, Rule, Setup, SweepPlan
 from lozenge_engine.errors import InputError
+from lozenge_engine.evidence import EvidencePlan
 from lozenge_engine.geometry import Region
 from lozenge_engine.placement import gaps
 from lozenge_engine.plan import Axis, CampaignPlan, Target
 
-__all__ = ["DEFAULT", "at", "campaign_of", "campaign_section", "sections_of", "setup_of"]
+__all__ = [
+    "DEFAULT",
+    "at",
+    "campaign_of",
+    "campaign_section",
+    "evidence_of",
+    "evidence_section",
+    "sections_of",
+    "setup_of",
+]
 
 DEFAULT = Setup()
 
@@ -32,7 +42,7 @@ def sections_of(setup: Setup) -> dict[str, Any]:
         Sections points, mass, regions, truncation, order, averaging and sweeps.
     """
     return {
-        "points": {k: v for k, v in asdict(setup.points).items() if v is not None},
+        "points": {k: v for k, v in setup.points.plain().items() if v is not None},
         "mass": _float(setup.mass),
         "regions": _regions_document(setup),
         "truncation": _truncation_document(setup),
@@ -112,7 +122,7 @@ def setup_of(document: Mapping[str, Any]) -> Setup:
         If the engine cannot take the values together, such as regions that overlap.
     """
     with at("points"):
-        points = PointSource(**_whole(document["points"], "seed"))
+        points = PointSource(**_whole(document["points"], "seed", "oversampling"))
     with at("sweeps"):
         sweeps = SweepPlan(
             **_whole(
@@ -238,3 +248,45 @@ def campaign_of(section: Mapping[str, Any]) -> CampaignPlan:
             budget=section["budget"],
             smallest_region=int(section["smallest_region"]),
         )
+
+
+# ----------------------------------------------------------------------- evidence
+
+
+def evidence_section(plan: EvidencePlan) -> dict[str, Any]:
+    """Write what is asked for as evidence as plain values, in the order of the file.
+
+    Parameters
+    ----------
+    plan : EvidencePlan
+        What the evidence page is to compute.
+
+    Returns
+    -------
+    dict
+        A key for each field of the plan.
+    """
+    return {k: list(v) if isinstance(v, tuple) else v for k, v in asdict(plan).items()}
+
+
+def evidence_of(section: Mapping[str, Any]) -> EvidencePlan:
+    """Build an evidence plan, so that a refusal can name its section.
+
+    Parameters
+    ----------
+    section : mapping
+        The section ``evidence`` of a preset document that fits the schema.
+
+    Returns
+    -------
+    EvidencePlan
+        Checked in full.
+
+    Raises
+    ------
+    InputError
+        If the values do not go together, such as the ends of the range of alpha.
+    """
+    counts = ("alphas", "realisations", "region", "rank")
+    with at("evidence"):
+        return EvidencePlan(**_whole(section, *counts) | {"rules": tuple(section["rules"])})

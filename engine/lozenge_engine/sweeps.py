@@ -7,7 +7,7 @@ fit.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -183,14 +183,16 @@ def density_curve(setup: Setup, readings: Readings) -> ScalingCurve:
     Returns
     -------
     ScalingCurve
-        With the Calabrese-Cardy slope of the massless field; without one for a massive field.
+        With the Calabrese-Cardy slope of the massless field, which is set at short distance and so
+        holds in a curved patch too; without one for a massive field.
     """
     plan, regions = density_draws(setup), setup.regions()
     rungs: list[list[tuple[Reading, ...]]] = [[] for _ in plan.values]
     for draw, rung in zip(plan.draws, plan.point_of, strict=True):
         if readings.get(draw.key):
             rungs[rung].append(readings[draw.key])
-    places = [abscissa(regions, float(density)) for density in plan.values]
+    sources = [replace(setup.points, density=float(density)) for density in plan.values]
+    places = [abscissa(regions, source) for source in sources]
     samples = [_finite(column_of(rows, "union_support", None)) for rows in rungs]
     elements = np.array([n for _, n in places])
     big = elements >= setup.sweeps.smallest_region
@@ -256,7 +258,7 @@ def size_curve(setup: Setup, readings: Readings) -> ScalingCurve:
         .reshape(len(sets), len(rows))
         .T
     )
-    places = [abscissa(layout, setup.points.density) for layout in sets]
+    places = [abscissa(layout, setup.points) for layout in sets]
     x, elements = (np.array([place[i] for place in places]) for i in (0, 1))
     used = (elements >= setup.sweeps.smallest_region) & bool(rows)
     complete = table[np.isfinite(table[:, used]).all(axis=1)][:, used]

@@ -46,7 +46,8 @@ def bare(setup: Setup = SMALL) -> Scene:
     """A scene of one sprinkling, nothing behind it."""
     config = setup.config()
     result = compute(config, stages=STAGES)
-    return Scene(setup=setup, result=result, continuum=continuum_eigenvalues(config, 60))
+    continuum = continuum_eigenvalues(config, 60, ratio=result.oversampling)
+    return Scene(setup=setup, result=result, continuum=continuum)
 
 
 @functools.cache

@@ -713,3 +713,56 @@ def handlers() -> Iterator[None]:
     before = signal.getsignal(signal.SIGINT), signal.getsignal(signal.SIGTERM)
     yield
     assert (signal.getsignal(signal.SIGINT), signal.getsignal(signal.SIGTERM)) == before
+
+
+# -------------------------------------------------------------------------- other point sets
+
+
+@pytest.mark.parametrize(
+    ("points", "words"),
+    [
+        (
+            replace(SETUP.points, kind="lattice", oversampling=4, curvature="negative"),
+            "lattice points, laid at 4 times the density, negative curvature, radius 1",
+        ),
+        (
+            replace(SETUP.points, curvature="positive", radius=1.5),
+            "poisson points, positive curvature, radius 1.5",
+        ),
+    ],
+)
+def test_a_campaign_over_another_point_set_runs_and_says_which(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], points: PointSource, words: str
+) -> None:
+    plan = replace(PLAN, realisations=8, axes=(Axis(name="density", values=(60.0, 90.0)),))
+    preset = saved(tmp_path / "a.json", plan, SETUP.with_(points=points))
+    file = computed(preset, tmp_path / "a.results")
+    assert words in " ".join(capsys.readouterr().out.split())
+    with store.inspect(file) as results:
+        assert results.preset.setup.points == points
+        tried = controls(results)
+        table = results.table(0)
+    elements = table.region_elements[0].mean()
+    assert elements == pytest.approx(
+        replace(points, density=60.0).elements(SETUP.regions()[0]), rel=0.2
+    )
+    if points.quasi_uniform:
+        assert elements > 1.05 * 60.0 * SETUP.regions()[0].area  # curvature adds volume
+        assert tried == (None, None)  # no sprinkling noise to be taken out
+    else:
+        assert all(found is not None for found in tried)
+
+
+def test_a_preset_over_a_lattice_is_run_with_what_its_error_means(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    points = replace(SETUP.points, kind="lattice", oversampling=4, curvature="positive")
+    preset = saved(tmp_path / "a.json", None, SETUP.with_(points=points))
+    assert cli.main(["run", preset]) == cli.OK
+    out = " ".join(capsys.readouterr().out.split())
+    assert (
+        "lattice points, seed 5, laid at 4 times the density, positive curvature, radius 1" in out
+    )
+    assert "mean of 8 shifts" in out
+    assert "no sprinkling noise" in out
+    assert "massless only" in out

@@ -316,7 +316,7 @@ def test_the_shipped_presets_are_listed_and_printed(capsys: pytest.CaptureFixtur
     assert cli.main(["presets"]) == cli.OK
     out = capsys.readouterr().out
     assert [line for line in out.splitlines() if not line.startswith(" ")] == [*presets.SHIPPED]
-    assert out.count("(invented scenario)") == 6
+    assert out.count("(invented scenario)") == len(presets.SHIPPED)
     assert cli.main(["presets", "volume-law"]) == cli.OK
     assert presets.parse(capsys.readouterr().out) == presets.shipped()["volume-law"]
 
@@ -328,7 +328,8 @@ def test_every_shipped_preset_runs_and_can_be_trusted(
     assert cli.main(["run", name, "--one"]) == cli.OK
     out = capsys.readouterr().out
     assert out.startswith(presets.shipped()[name].title + " (invented scenario)\n")
-    assert "not in the scaling regime" not in out
+    # That one is small on the screen, for its campaign at higher densities; it has to say so.
+    assert ("not in the scaling regime" in out) == (name == "rows-of-tenths")
 
 
 def test_the_version_is_told(capsys: pytest.CaptureFixture[str]) -> None:

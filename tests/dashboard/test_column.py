@@ -6,7 +6,7 @@ from typing import Any
 
 import pytest
 
-from lozenge_dashboard.column import Behind, Heading, Job, column_state
+from lozenge_dashboard.column import Behind, Heading, Job, TwinNote, column_state
 from lozenge_engine.bench import Bench
 from lozenge_engine.config import Setup
 
@@ -16,13 +16,13 @@ def state(bench: Bench, loaded: Setup | None = None, **errors: str) -> dict[str,
     return column_state(
         bench,
         loaded or bench.setup(),
-        union_rule="support",
-        loaded_union_rule="support",
+        view={"union_rule": ("support", "support"), "twin": (False, False)},
         errors=errors,
         seconds={"modes": 0.2, "entropies": 0.03},
         heading=Heading("title", "sentence"),
         job=Job(),
         behind=Behind(),
+        twin=TwinNote(),
     )
 
 
@@ -73,6 +73,23 @@ def test_modes_that_need_a_dense_problem_are_closed_for_many_elements() -> None:
     assert "closed" not in state(Bench(density=1000))["fields"]["truncation_mode"]
     closed = state(Bench(density=2400))["fields"]["truncation_mode"]["closed"]
     assert set(closed) == {"none", "regions_only"}
+
+
+def test_oversampled_points_are_counted_for_the_dense_problem() -> None:
+    bench = Bench(density=500, kind="lattice", oversampling=4, truncation_mode="none")
+    assert state(bench)["fields"]["elements"]["high"] == 1000
+    bench = Bench(density=1000, kind="lattice", oversampling=4)
+    assert "closed" in state(bench)["fields"]["truncation_mode"]
+
+
+def test_curvature_and_oversampling_show_where_they_act() -> None:
+    fields = state(Bench())["fields"]
+    assert fields["oversampling"]["hidden"]
+    assert fields["radius"]["hidden"]
+    assert "hidden" not in state(Bench(kind="sobol"))["fields"]["oversampling"]
+    curved = state(Bench(curvature="negative"))["fields"]
+    assert "hidden" not in curved["radius"]
+    assert "massless" in curved["mass"]["disabled"]
 
 
 def test_error_stands_at_its_control() -> None:

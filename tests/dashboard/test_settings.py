@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 
-from lozenge_dashboard.controls import GROUPS
+from lozenge_dashboard.controls import GROUPS, VIEW_FIELDS
 from lozenge_dashboard.settings import SETTINGS
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import InputError
@@ -13,7 +13,10 @@ SETUP = Setup()
 OTHER = {
     "elements": 3000,
     "kind": "fixed",
+    "oversampling": 4,
     "seed": 7,
+    "curvature": "negative",
+    "radius": 2.5,
     "mass": 2.0,
     "region_count": 1,
     "half_width": 0.2,
@@ -40,6 +43,8 @@ OTHER = {
 }
 # A rule forgets what its kind does not use.
 NEEDS = {
+    "oversampling": ("kind", "lattice"),
+    "radius": ("curvature", "positive"),
     "patch_number": ("patch_kind", "fixed_number"),
     "region_number": ("region_kind", "fixed_number"),
 }
@@ -47,7 +52,7 @@ NEEDS = {
 
 def test_page_offers_every_setting_and_no_other() -> None:
     offered = {field.name for group in GROUPS for field in group.fields}
-    assert offered - {"union_rule"} == set(SETTINGS)
+    assert offered - set(VIEW_FIELDS) == set(SETTINGS)
     assert set(OTHER) == set(SETTINGS) - {"regions"}
 
 
@@ -63,7 +68,8 @@ def test_value_that_is_put_is_read_back(name: str) -> None:
 
 
 @pytest.mark.parametrize(
-    "name", sorted(set(OTHER) - {"kind", "truncation_mode", "patch_kind", "region_kind"})
+    "name",
+    sorted(set(OTHER) - {"kind", "curvature", "truncation_mode", "patch_kind", "region_kind"}),
 )
 @pytest.mark.parametrize("value", ["wide", "", None, True, [1]])
 def test_what_is_no_number_is_refused_in_words(name: str, value: object) -> None:
@@ -75,6 +81,12 @@ def test_what_is_no_number_is_refused_in_words(name: str, value: object) -> None
 def test_broken_number_is_refused_where_a_whole_one_is_needed(name: str) -> None:
     with pytest.raises(InputError, match="whole number"):
         SETTINGS[name].put(SETUP, 2.5)
+
+
+def test_a_sprinkling_forgets_the_oversampling_of_a_lattice() -> None:
+    lattice = SETTINGS["oversampling"].put(SETTINGS["kind"].put(SETUP, "lattice"), 8)
+    assert SETTINGS["kind"].put(lattice, "sobol").points.oversampling == 8
+    assert SETTINGS["kind"].put(lattice, "poisson").points.oversampling == 1
 
 
 def test_row_becomes_a_list_and_a_row_again() -> None:

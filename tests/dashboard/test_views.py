@@ -15,7 +15,7 @@ from lozenge_dashboard.records import Choices
 from lozenge_dashboard.views import counts, entropies, scaling, separation, spectrum, sprinkling
 from lozenge_dashboard.views.catalogue import VIEWS, Figure, register_all
 from lozenge_dashboard.views.marks import Dust, Layer, Marks
-from lozenge_engine.config import Setup
+from lozenge_engine.config import PointSource, Setup
 
 CHOICES = Choices()
 FIGURES = [figure for view in VIEWS for figure in view.figures.values()]
@@ -155,3 +155,27 @@ def test_theme_changes_colours_and_nothing_else() -> None:
     light, dark = (spectrum.read(bare(), CHOICES, look) for look in (LIGHT, DARK))
     assert np.array_equal(light.eigenvalues.y, dark.eigenvalues.y)
     assert not set(light.eigenvalues.colour[2:]) & set(dark.eigenvalues.colour[2:])
+
+
+SET = PointSource(kind="lattice", oversampling=4, density=120.0, seed=5)
+OTHER_SETS = [
+    SET,
+    replace(SET, kind="sobol", curvature="positive", radius=1.2),
+    replace(SET, kind="poisson", oversampling=1, curvature="negative"),
+]
+
+
+@pytest.mark.parametrize("points", OTHER_SETS, ids=lambda p: f"{p.kind}, {p.curvature}")
+def test_other_point_sets_are_named_and_drawn(points: PointSource) -> None:
+    scene = bare(SMALL.with_(points=points))
+    text = sprinkling.caution(scene, CHOICES)
+    assert ("points" in text) == points.quasi_uniform
+    assert ("Curvature" in text) == points.curved
+    for view in VIEWS:
+        assert len(view.caution(scene, CHOICES)) < 130
+    data = spectrum.read(scene, CHOICES, LIGHT)
+    assert (data.eigenvalues.fill == 1.0).any()
+    # Without a closed form there is no line, and the caution claims none.
+    exact = [w for w in ("Line: exact", "No exact line") if w in spectrum.caution(scene, CHOICES)]
+    assert exact == (["No exact line"] if points.curved else ["Line: exact"])
+    assert (scene.continuum.size == 0) == points.curved

@@ -47,8 +47,10 @@ def test_a_shipped_preset_comes_back(name: str) -> None:
         screen(CUSTOM, union_rule="direct_sum"),
         screen(Setup(points=PointSource(density=1234.5, seed=2**53 - 1), mass=1.25)),
         screen(Setup(points=PointSource(kind="fixed"), truncation_mode="patch_only")),
+        screen(Setup(points=PointSource(kind="lattice", oversampling=4, curvature="negative"))),
+        screen(Setup(points=PointSource(curvature="positive", radius=2.5)), twin=True),
     ],
-    ids=["list", "custom", "seed", "fixed"],
+    ids=["list", "custom", "seed", "fixed", "lattice", "curved"],
 )
 def test_every_kind_of_screen_comes_back(preset: Preset) -> None:
     found = address.read_query(address.query_of(preset))

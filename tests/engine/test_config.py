@@ -9,6 +9,7 @@ from typing import Any
 
 import pytest
 
+from lozenge_engine import presets
 from lozenge_engine.config import (
     MAX_ELEMENTS,
     MAX_SEED,
@@ -20,6 +21,7 @@ from lozenge_engine.config import (
     Setup,
     SweepPlan,
 )
+from lozenge_engine.design import identity
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.geometry import Region, equal_row
 from lozenge_engine.placement import gaps
@@ -38,6 +40,18 @@ REFUSED: list[tuple[type, dict[str, Any], str]] = [
     (PointSource, {"seed": 1.0}, "seed"),
     (PointSource, {"kind": "file"}, "points"),
     (PointSource, {"sha256": "ab"}, "points"),
+    (PointSource, {"oversampling": 4}, "oversampling"),
+    (PointSource, {"kind": "lattice", "oversampling": 0}, "oversampling"),
+    (PointSource, {"kind": "sobol", "oversampling": 65}, "oversampling"),
+    (PointSource, {"kind": "lattice", "oversampling": 2.0}, "oversampling"),
+    (PointSource, {"kind": "lattice", "oversampling": 64, "density": 1e5}, "density"),
+    (PointSource, {"curvature": "round"}, "curvature"),
+    (PointSource, {"curvature": "positive", "radius": 0.69}, "radius"),
+    (PointSource, {"curvature": "negative", "radius": 1001.0}, "radius"),
+    (PointSource, {"curvature": "negative", "radius": math.inf}, "radius"),
+    (PointSource, {"kind": "file", "sha256": "ab", "curvature": "positive"}, "curvature"),
+    (PointSource, {"curvature": "positive", "radius": 0.7, "density": 4e5}, "density"),
+    (Config, {"points": PointSource(curvature="negative"), "mass": 1.0}, "mass"),
     (Rule, {"kind": "half"}, "rule"),
     (Rule, {"alpha": 0.04}, "alpha"),
     (Rule, {"alpha": 20.1}, "alpha"),
@@ -255,3 +269,43 @@ def test_a_lower_density_refuses_a_mass_that_it_cannot_carry() -> None:
 
 
 DEFAULT_DIGEST = "cdeded20b7a4782015e69c1358ea749180296eca5a68b609108a0f33cf557861"
+
+
+# ------------------------------------------------------------------ what older files rest on
+
+
+def test_digests_of_older_versions_stay_the_same() -> None:
+    # Frozen before quasi-uniform points and curvature were added.
+    assert Config().digest == "cdeded20b7a4782015e69c1358ea749180296eca5a68b609108a0f33cf557861"
+    setup = presets.shipped()["two-equal-regions"].setup
+    assert setup.config().digest == (
+        "7aff7773d9c80c565c1f0265669773297d6272213c086bbe49f324f47ea609b7"
+    )
+
+
+def test_campaign_identities_of_older_versions_stay_the_same() -> None:
+    preset = presets.shipped()["three-equal-regions"]
+    assert preset.campaign is not None
+    assert identity(preset.setup, preset.campaign) == (
+        "b9c8f8445dcc5ed1fcc6123109f0743f3a6480d833fc65ce7c9493f8753282fa"
+    )
+
+
+@pytest.mark.parametrize(
+    "other",
+    [
+        PointSource(kind="lattice"),
+        PointSource(kind="sobol"),
+        PointSource(kind="lattice", oversampling=2),
+        PointSource(curvature="positive"),
+        PointSource(curvature="negative"),
+        PointSource(curvature="negative", radius=2.0),
+    ],
+)
+def test_digest_sees_kind_oversampling_and_curvature(other: PointSource) -> None:
+    digests = {Config(points=source).digest for source in (PointSource(), other)}
+    assert len(digests) == 2
+
+
+def test_flat_sources_are_equal_whatever_their_radius() -> None:
+    assert PointSource(radius=3.0) == PointSource()

@@ -9,7 +9,13 @@ import pytest
 from scipy import linalg
 
 from lozenge_engine.errors import InputError
-from lozenge_engine.kernels.chain import block_sites, chain_entropy, chain_slopes
+from lozenge_engine.kernels.chain import (
+    block_sites,
+    chain_entropies,
+    chain_entropy,
+    chain_slopes,
+    refined_limit,
+)
 
 SEVENTHS = [(1 / 7, 2 / 7), (3 / 7, 4 / 7), (5 / 7, 6 / 7)]
 
@@ -100,3 +106,46 @@ def test_too_many_sites_are_refused_with_the_limit() -> None:
     with pytest.raises(InputError, match="6000"):
         chain_entropy([(0.0, 1.0)], sites=7000)
     assert math.isfinite(chain_entropy([(0.0, 0.5)], sites=10))
+
+
+# Source: J. Phys. A 42 (2009) 504005, arXiv:0905.4013: K/3 for 2 K ends, (c/6)(1 + 1/q) for Renyi.
+@pytest.mark.parametrize(
+    ("blocks", "first", "order", "limit"),
+    [
+        ([(0.4, 0.6)], 40, 1.0, 1 / 3),
+        ([(0.2, 0.4), (0.6, 0.8)], 40, 1.0, 2 / 3),
+        (SEVENTHS, 56, 1.0, 1.0),
+        ([(0.0, 0.2)], 40, 1.0, 1 / 6),
+        ([(0.45, 0.55)], 40, 1.0, 1 / 3),
+        ([(0.4, 0.6)], 40, 2.0, 1 / 4),
+        ([(0.4, 0.6)], 40, 3.0, 2 / 9),
+    ],
+)
+def test_extrapolated_slopes_hold_the_limit_within_their_error(
+    blocks: list[tuple[float, float]], first: int, order: float, limit: float
+) -> None:
+    slopes = chain_slopes(blocks, first=first, doublings=5, order=order).slopes
+    found = refined_limit(slopes, order=order)
+    assert abs(found.value - limit) < found.error
+    assert found.error < 2e-4
+    assert abs(slopes[-1] - limit) > found.error  # without the extrapolation it is not reached
+
+
+def test_a_limit_needs_four_values() -> None:
+    assert math.isnan(refined_limit(np.array([1.0, 2.0, 3.0])).value)
+
+
+def test_a_sequence_with_two_powers_is_extrapolated_exactly() -> None:
+    n = 10.0 * 2 ** np.arange(5)
+    found = refined_limit(0.7 + 3 / n - 5 / n**2)
+    assert found.value == pytest.approx(0.7, abs=1e-12)
+
+
+def test_entropies_of_parts_are_those_of_parts_alone() -> None:
+    blocks = [(0.1, 0.3), (0.5, 0.7), (0.8, 0.9)]
+    found = chain_entropies(blocks, [(0, 1, 2), (1,), (0, 2)], sites=40, mass_over_sites=0.1)
+    alone = [
+        chain_entropy(some, sites=40, mass_over_sites=0.1)
+        for some in (blocks, blocks[1:2], [blocks[0], blocks[2]])
+    ]
+    assert found == pytest.approx(alone, rel=1e-12)

@@ -71,10 +71,6 @@ class PlacementsField extends Field {
 
 const KINDS = { ...FIELDS, text: TextField, placements: PlacementsField };
 
-function button(text, hint, act, kind) {
-  return make("button", { type: "button", title: hint, class: kind, onclick: act }, text);
-}
-
 function head(act) {
   const parts = {
     title: make("h1", {}, "Campaign"),
@@ -91,9 +87,7 @@ function updateHead(parts, page) {
   parts.sentence.textContent = page.sentence;
   parts.error.textContent = page.error;
   parts.error.hidden = !page.error;
-  parts.theme.textContent = page.theme === "dark" ? "Light" : "Dark";
-  parts.theme.title = `Changes to the ${page.theme === "dark" ? "light" : "dark"} colours.`;
-  Object.assign(document.documentElement.dataset, { theme: page.theme, focus: page.focus || "none" });
+  dress(parts.theme, page);
   const address = new URL(location.href);
   if (page.file && address.searchParams.get("file") !== page.file) {
     address.searchParams.set("file", page.file);

@@ -19,12 +19,6 @@ function opener(spec, model) {
   return [make("button", { type: "button", title: spec.hint, onclick: () => input.click() }, spec.label), input];
 }
 
-function save(name, text) {
-  const link = make("a", { href: URL.createObjectURL(new Blob([text], { type: "application/json" })), download: name });
-  link.click();
-  setTimeout(() => URL.revokeObjectURL(link.href), 10000);
-}
-
 function heading(model, act) {
   const parts = {
     title: make("h1"), sentence: make("p", { class: "sentence" }), agreement: make("p", { class: "agreement", role: "status" }),
@@ -33,13 +27,14 @@ function heading(model, act) {
     back: make("button", { type: "button", onclick: () => act("back"), title: "Returns every control to the loaded preset." }, "Back to preset"),
     theme: make("button", { type: "button", onclick: () => act("theme") }),
     campaign: make("a", { class: "button", href: model.campaign, target: "_blank", title: "Opens a page that runs this screen over many realisations, until an error is reached." }, "Campaign …"),
+    evidence: make("a", { class: "button", href: model.evidence, target: "_blank", title: "Opens a page that asks what this screen's numbers are due to: cut, geometry, state or sprinkling." }, "Evidence …"),
   };
   const shipped = make("select", { "aria-label": "Shipped presets", onchange: () => { model.send_msg({ kind: "act", name: "shipped", value: shipped.value }); shipped.value = ""; } },
     make("option", { value: "" }, "Presets"), ...model.shipped.map(([value, label]) => make("option", { value }, label)));
   const files = opener({ name: "preset", label: "Open", accept: ".json,application/json", limit: model.preset_limit, hint: "Loads a preset file; it may also be dropped on this column." }, model);
   const saver = make("button", { type: "button", onclick: () => act("save"), title: "Downloads this screen as a preset file, with its numbers." }, "Save");
   parts.node = make("header", {}, parts.title, parts.sentence, parts.agreement,
-    make("div", { class: "buttons" }, shipped, ...files, saver, parts.back, parts.keep, parts.theme, parts.campaign), parts.error);
+    make("div", { class: "buttons" }, shipped, ...files, saver, parts.back, parts.keep, parts.theme, parts.campaign, parts.evidence), parts.error);
   return parts;
 }
 
@@ -64,9 +59,7 @@ function updateHeading(parts, page) {
   parts.keep.setAttribute("aria-pressed", page.keeping ? "true" : "false");
   parts.keep.textContent = page.keeping ? "Remove kept" : "Keep";
   parts.back.disabled = !page.changed;
-  parts.theme.textContent = page.theme === "dark" ? "Light" : "Dark";
-  parts.theme.title = `Changes to the ${page.theme === "dark" ? "light" : "dark"} colours.`;
-  Object.assign(document.documentElement.dataset, { theme: page.theme, focus: page.focus || "none" });
+  dress(parts.theme, page);
 }
 
 function updateWork(parts, job) {

@@ -16,6 +16,23 @@ function make(tag, attributes = {}, ...children) {
   return node;
 }
 
+function button(text, hint, act, kind) {
+  return make("button", { type: "button", title: hint, class: kind, onclick: act }, text);
+}
+
+// Gives the document the theme and the view with the room, and the theme's button its words.
+function dress(button, page) {
+  button.textContent = page.theme === "dark" ? "Light" : "Dark";
+  button.title = `Changes to the ${page.theme === "dark" ? "light" : "dark"} colours.`;
+  Object.assign(document.documentElement.dataset, { theme: page.theme, focus: page.focus || "none" });
+}
+
+function save(name, text) {
+  const link = make("a", { href: URL.createObjectURL(new Blob([text], { type: "application/json" })), download: name });
+  link.click();
+  setTimeout(() => URL.revokeObjectURL(link.href), 10000);
+}
+
 function shown(value) {
   if (typeof value !== "number") return value ?? "";
   return String(Number(value.toPrecision(12)));

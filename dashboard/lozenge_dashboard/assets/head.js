@@ -24,17 +24,35 @@ export function render({ model, el }) {
     return input;
   });
   set.hidden = !inputs.length;
+  const beside = document.createElement("div");
+  beside.className = "beside";
+  const toggles = (model.toggles || []).map(([name, text, hint]) => {
+    const toggle = document.createElement("button");
+    Object.assign(toggle, { type: "button", className: "toggle", textContent: text, title: hint });
+    toggle.addEventListener("click", () => model.send_msg({ kind: "toggle", name, value: toggle.getAttribute("aria-pressed") !== "true" }));
+    beside.append(toggle);
+    return [name, toggle];
+  });
+  beside.hidden = !toggles.length;
+  const act = document.createElement("button");
+  act.type = "button";
+  act.className = "act";
+  act.addEventListener("click", () => model.send_msg({ kind: "act", name: model.action }));
   const update = () => {
+    act.hidden = !model.action;
+    act.textContent = model.action === "cancel" ? "Cancel" : "Compute";
+    act.title = model.action === "cancel" ? "Stops this computation; what is shown stays." : "Computes this view for the present settings.";
     button.textContent = model.question;
     button.setAttribute("aria-expanded", model.focused ? "true" : "false");
     for (const input of inputs) input.checked = input.value === model.choice;
-    state.textContent = model.stale;
-    document.getElementById(`view-${model.key}`)?.classList.toggle("stale", Boolean(model.stale));
+    for (const [name, toggle] of toggles) toggle.setAttribute("aria-pressed", (model.shown || []).includes(name) ? "true" : "false");
+    state.textContent = state.title = model.stale;
+    document.getElementById(`view-${model.key}`)?.classList.toggle("stale", Boolean(model.stale) && !model.fresh);
   };
-  for (const name of ["question", "focused", "choice", "stale"]) model.on(name, update);
+  for (const name of ["question", "focused", "choice", "stale", "fresh", "action", "shown"]) model.on(name, update);
   const head = document.createElement("div");
-  head.className = "head";
-  head.append(title, state, set);
+  head.className = model.tall ? "head tall" : "head";
+  head.append(title, state, act, beside, set);
   el.append(head);
   update();
 }

@@ -195,7 +195,7 @@ def _sentences(watch: Watch, found: list[Curve], look: Look, *, fits: bool) -> l
 
 def named(label: str) -> str:
     """The other axis' value as it is said in a figure."""
-    return label.replace("region_count ", "K = ").replace("_", " ")
+    return label.replace("_", " ").replace("region count ", "K = ")
 
 
 def fraction(slope: float) -> str:

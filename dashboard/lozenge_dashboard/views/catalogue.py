@@ -32,6 +32,8 @@ class Figure(NamedTuple):
         Columns before the first record.
     axes : dict
         What `lozenge_dashboard.views.marks.register` takes.
+    square : bool
+        Whether both axes have one scale, so that light rays are at 45 degrees.
     """
 
     group: str
@@ -39,6 +41,7 @@ class Figure(NamedTuple):
     draw: Callable[[Any], hv.Overlay]
     blank: Any
     axes: dict[str, Any]
+    square: bool = False
 
 
 class View(NamedTuple):
@@ -56,6 +59,8 @@ class View(NamedTuple):
         scene -> what it depends on; the view is drawn anew when one of these is another object.
     options : tuple of (value, label)
         The view's switch, if it has one.
+    toggles : tuple of (name, label, hint)
+        What may be shown beside: names of choices that are on or off.
     """
 
     name: str
@@ -64,11 +69,27 @@ class View(NamedTuple):
     caution: Callable[[Any, Any], str]
     parts: Callable[[Any], tuple[Any, ...]]
     options: tuple[tuple[str, str], ...] = ()
+    toggles: tuple[tuple[str, str, str], ...] = ()
 
 
 def _front(scene: Scene) -> tuple[Any, ...]:
     """The sprinkling in front and the scene kept for comparison."""
     return scene.result, scene.reference
+
+
+def _front_twin(scene: Scene) -> Any:
+    """The twin of the geometry in front."""
+    return scene.beside.front if scene.beside is not None else None
+
+
+def _twinned(scene: Scene) -> tuple[Any, ...]:
+    """What is in front, and its twin."""
+    return *_front(scene), _front_twin(scene)
+
+
+def _sweep_twin(scene: Scene) -> Any:
+    """What stands beside the sweep of separation."""
+    return scene.beside.separation if scene.beside is not None else None
 
 
 VIEWS = (
@@ -86,6 +107,7 @@ VIEWS = (
                     "y": "time t (patch half-widths)",
                     "align": "center",
                 },
+                square=True,
             )
         },
         sprinkling.caution,
@@ -109,7 +131,7 @@ VIEWS = (
             )
         },
         spectrum.caution,
-        _front,
+        _twinned,
     ),
     View(
         "counts",
@@ -124,7 +146,7 @@ VIEWS = (
             )
         },
         counts.caution,
-        _front,
+        _twinned,
     ),
     View(
         "entropies",
@@ -150,7 +172,7 @@ VIEWS = (
             ),
         },
         entropies.caution,
-        lambda scene: (*_front(scene), scene.average),
+        lambda scene: (*_twinned(scene), scene.average),
         (("values", "values"), ("modes", "per mode")),
     ),
     View(
@@ -170,8 +192,16 @@ VIEWS = (
             )
         },
         scaling.caution,
-        lambda scene: (scene.density, scene.size, scene.reference),
+        lambda scene: (scene.density, scene.size, scene.reference, scene.beside),
         (("density", "density"), ("size", "size")),
+        (
+            ("chain", "chain", "Lays the harmonic chain at the same fractions over the data."),
+            (
+                "difference",
+                "− twin",
+                "Shows data minus twin with its own slope: what sprinkling adds to geometry.",
+            ),
+        ),
     ),
     View(
         "separation",
@@ -203,7 +233,12 @@ VIEWS = (
             ),
         },
         separation.caution,
-        lambda scene: (scene.separation, scene.setup.separation, *_front(scene)[1:]),
+        lambda scene: (
+            scene.separation,
+            scene.setup.separation,
+            scene.reference,
+            _sweep_twin(scene),
+        ),
         (("mutual", "I"), ("union", "S")),
     ),
 )

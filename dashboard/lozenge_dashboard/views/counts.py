@@ -3,16 +3,20 @@
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
+from typing import TYPE_CHECKING, NamedTuple
 
 import holoviews as hv
 import numpy as np
 
 from lozenge_dashboard.palette import MARKERS, PATCH_MARKER, UNION_MARKERS, Look
 from lozenge_dashboard.records import RULE_NAMES, Choices, Scene
+from lozenge_dashboard.views.beside import WORDY_ROWS, front_of, numbers, upright
 from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay
 from lozenge_engine.geometry import region_letter
 from lozenge_engine.result import Result
+
+if TYPE_CHECKING:
+    from lozenge_engine.twin import TwinValue
 
 __all__ = ["Count", "Counts", "caution", "draw", "read"]
 
@@ -68,11 +72,16 @@ def read(scene: Scene, choices: Choices, look: Look) -> Counts:
     """Lay out the counts of the sprinkling in front."""
     table = rows(scene.result, look)
     old = rows(scene.reference.result, look) if scene.reference else []
+    twins = _twins(scene, choices)
     height = len(table)
     y = np.arange(height, 0, -1.0)
     places = {row.name: at for row, at in zip(table, y, strict=True)}
     old = [row for row in old if row.name in places]
     top = max(max(row.kept, row.nominal) for row in table)
+    ends = [max(row.kept, row.nominal) for row in table]
+    words = numbers(
+        [_number(row) for row in table], [twins.get(row.name) for row in table], ends, y, look
+    )
     # The widest numbers need half of the axis at 150 % zoom.
     limits = Limits(0.0, 2.8 * max(top, 1.0), 0.4, height + 0.7)
     return Counts(
@@ -85,6 +94,7 @@ def read(scene: Scene, choices: Choices, look: Look) -> Counts:
                 (row.nominal, at - 0.32, row.nominal, at + 0.32, look.ink, 2.0, "solid")
                 for row, at in zip(table, y, strict=True)
             ),
+            *(part for name, v in twins.items() for part in upright(v, places[name], look)),
         ),
         marks=Marks.of(
             *((row.kept, places[row.name] - 0.22, look.kept, row.marker, 7.0, 1.0) for row in old),
@@ -93,15 +103,18 @@ def read(scene: Scene, choices: Choices, look: Look) -> Counts:
                 for row, at in zip(table, y, strict=True)
             ),
         ),
-        numbers=Words.of(
-            *(
-                (max(row.kept, row.nominal), at, _number(row), look.ink)
-                for row, at in zip(table, y, strict=True)
-            )
-        ),
+        numbers=Words.of(*words),
         limits=limits,
         ticks=tuple((at, row.name) for row, at in zip(table, y, strict=True)),
     )
+
+
+def _twins(scene: Scene, choices: Choices) -> dict[str, TwinValue]:
+    """Modes that the twin keeps, by the name of the row; it has no count for the union."""
+    twin = front_of(scene, choices)
+    if twin is None:
+        return {}
+    return {"patch": twin.patch_kept} | {region_letter(i): v for i, v in enumerate(twin.kept)}
 
 
 def _number(row: Count) -> str:
@@ -120,6 +133,9 @@ def caution(scene: Scene, choices: Choices) -> str:
     """Say what the nominal number is, and when the first stage starves the second."""
     result = scene.result
     text = "Upright line: nominal 2√n."
+    if front_of(scene, choices) is not None:
+        bar = " (behind the bar)" if len(result.regions) + 3 > WORDY_ROWS else ""
+        text = f"Upright lines: nominal 2√n; twin{bar or ' (accent)'}."
     starved = [
         region_letter(i)
         for i, r in enumerate(result.regions)

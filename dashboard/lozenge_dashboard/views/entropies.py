@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Any, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import holoviews as hv
 import numpy as np
@@ -11,7 +11,11 @@ import numpy as np
 from lozenge_dashboard.palette import MARKERS, UNION_MARKERS, Look
 from lozenge_dashboard.readings import Value, values
 from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.views.beside import WORDY_ROWS, front_of, numbers, sets_of, upright, value_of
 from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay
+
+if TYPE_CHECKING:
+    from lozenge_engine.twin import TwinValue
 
 __all__ = [
     "BLANK",
@@ -77,6 +81,12 @@ def _reach(value: Value) -> float:
     return max(ends, default=0.0)
 
 
+def _end(value: Value, twin: TwinValue | None) -> float:
+    """Where the words of a row begin."""
+    ends = [0.0, _reach(value)] + ([] if twin is None else [twin.value + twin.error])
+    return max(x for x in ends if math.isfinite(x))
+
+
 def read(scene: Scene, choices: Choices, look: Look) -> Entropies:
     """Lay out S of every region, S of the union and I of the nearest pairs."""
     table = [v for v in values(scene) if not v.far]
@@ -88,13 +98,27 @@ def read(scene: Scene, choices: Choices, look: Look) -> Entropies:
         else []
     )
     rows = list(zip(table, y, strict=True))
-    reach = max([0.1, *(_reach(v) for v in (*table, *old))])
-    low = min([0.0, *(v.mean - 0.02 * reach for v in table if math.isfinite(v.mean))])
+    twin = front_of(scene, choices)
+    twins = [None if twin is None else value_of(v, twin) for v in table]
+    drawn = [t.value for t in twins if t is not None and math.isfinite(t.value)]
+    ends = [_end(v, t) for v, t in zip(table, twins, strict=True)]
+    words = numbers([v.text for v in table], twins, ends, y, look)
+    # Room for the words: a number, or two with a bar between them.
+    room = 1.5 if twin is None or len(table) <= WORDY_ROWS else 2.2
+    reach = max([0.1, *(_reach(v) for v in (*table, *old)), *drawn])
+    known = [v.mean for v in table if math.isfinite(v.mean)]
+    low = min([0.0, *(x - 0.02 * reach for x in (*known, *drawn))])
     return Entropies(
         bars=Strokes.of(
             (0.0, 0.0, 0.0, len(table) + 1.0, look.rule, 1.0, "solid"),
             *(part for v in old for part in _bars(v, places[v.name, v.rule] - 0.25, look.kept)),
             *(part for v, at in rows for part in _bars(v, at, _style(v, look)[0])),
+            *(
+                part
+                for t, at in zip(twins, y, strict=True)
+                if t is not None
+                for part in upright(t, at, look)
+            ),
         ),
         marks=Marks.of(
             *(
@@ -104,8 +128,8 @@ def read(scene: Scene, choices: Choices, look: Look) -> Entropies:
             ),
             *((v.mean, at, *_style(v, look), 9.0, 1.0) for v, at in rows if math.isfinite(v.mean)),
         ),
-        numbers=Words.of(*((max(_reach(v), 0.0), at, v.text, look.ink) for v, at in rows)),
-        limits=Limits(low, 1.5 * reach, 0.4, len(table) + 0.7),
+        numbers=Words.of(*words),
+        limits=Limits(low, room * reach, 0.4, len(table) + 0.7),
         ticks=tuple((at, v.label) for v, at in rows),
     )
 
@@ -163,6 +187,12 @@ def caution(scene: Scene, choices: Choices) -> str:
     if choices.entropies == "modes":
         return f"Contributions above {SMALLEST_CONTRIBUTION:g} nats, for the sprinkling in front."
     count = max(v.count for v in values(scene))
+    twin = front_of(scene, choices)
+    if twin is not None:
+        error = f"standard error of {count}" if count > 1 else "one sprinkling, no error known"
+        wordy = sum(not v.far for v in values(scene)) > WORDY_ROWS
+        where = "Upright accent, number behind the bar" if wordy else "Upright accent"
+        return f"{where}: twin, {sets_of(twin)}. Marks: {error}."
     if count < 2:
         return "One sprinkling: no error is known; expect a scatter of 0.1 nats or more."
     cross = [v.cross_block for v in values(scene) if math.isfinite(v.cross_block)]

@@ -9,7 +9,8 @@ import numpy as np
 
 from lozenge_dashboard.palette import UNION_MARKERS, Look
 from lozenge_dashboard.records import RULE_NAMES, Choices, Scene, Spread, spread
-from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay
+from lozenge_dashboard.views.beside import TWIN_WIDTH, barred
+from lozenge_dashboard.views.marks import Column, Limits, Marks, Strokes, Words, overlay
 
 if TYPE_CHECKING:
     from lozenge_engine.sweeps import SeparationCurve
@@ -69,6 +70,29 @@ def _curves(scene: Scene) -> list[tuple[SeparationCurve, bool]]:
     return found
 
 
+def _twins(scene: Scene, choices: Choices) -> dict[str, tuple[Column, Column]]:
+    """Values and errors of the twin, per union rule, as far as wanted and known."""
+    company = scene.beside if choices.twin else None
+    if company is None or company.separation is None or scene.separation is None:
+        return {}
+    lines = company.separation
+    chosen = lines.mutual_information if choices.separation == "mutual" else lines.union
+    size = scene.separation.separation.size
+    return {rule: line for rule, line in chosen.items() if line[0].size == size}
+
+
+def _around(limits: Limits, twins: dict[str, tuple[Column, Column]]) -> Limits:
+    """Limits that hold the twin too."""
+    for value, error in twins.values():
+        ends = np.concatenate([value - error, value + error])
+        ends = ends[np.isfinite(ends)]
+        if ends.size:
+            low, high = float(ends.min()), float(ends.max())
+            pad = 0.25 * (high - low)
+            limits = limits.around(limits._replace(y_low=low, y_high=high + pad))
+    return limits
+
+
 def read(scene: Scene, choices: Choices, look: Look) -> Separation:
     """Lay out the sweep; the union rule that the page follows is drawn in full ink."""
     strokes: list[tuple[Any, ...]] = []
@@ -88,6 +112,15 @@ def read(scene: Scene, choices: Choices, look: Look) -> Separation:
             marks.append((x, y, colour, UNION_MARKERS[rule], 7.0, 1.0))
             if not grey:
                 words.append((x[-1:], y[-1:], RULE_NAMES[rule], colour))
+    twins = _twins(scene, choices)
+    if twins and limits is not EMPTY:
+        limits = _around(limits, twins)
+    for rule, (value, error) in twins.items():
+        width = TWIN_WIDTH if rule == choices.union_rule else 0.5 * TWIN_WIDTH
+        line = barred(scene.separation.separation, value, error, look.accent, width=width)  # type: ignore[union-attr]
+        strokes.extend(line)
+    if twins:
+        words.append(([0.0], [0.0], "lines: twin, thin for the other rule", look.accent))
     present = scene.setup.separation
     if scene.separation is not None:
         strokes.append((present, limits.y_low, present, limits.y_high, look.accent, 1.5, "dashed"))

@@ -9,6 +9,7 @@ import numpy as np
 
 from lozenge_dashboard.palette import MARKERS, PATCH_MARKER, Look
 from lozenge_dashboard.records import Choices, Scene
+from lozenge_dashboard.views.beside import front_of
 from lozenge_dashboard.views.marks import Limits, Marks, Strokes, Words, overlay, polyline
 from lozenge_engine.geometry import region_letter
 from lozenge_engine.result import Result
@@ -66,6 +67,27 @@ def _limits(scene: Scene, cuts: list[float]) -> Limits:
     return Limits(FIRST_RANK, 1.6 * max(ranks, 60), bottom, 1.8 * top)
 
 
+def _twin(scene: Scene, choices: Choices, look: Look) -> list[tuple[Any, ...]]:
+    """The twin's spectra in the units of the set in front, with errors as thin lines."""
+    twin = front_of(scene, choices)
+    if twin is None:
+        return []
+    ratio = scene.result.oversampling
+    spectra = [(twin.patch, twin.patch_spread, look.accent)]
+    spectra += [
+        (values, spread, look.regions[i])
+        for i, (values, spread) in enumerate(zip(twin.regions, twin.regions_spread, strict=True))
+    ]
+    parts = []
+    for values, spread, colour in spectra:
+        rank = np.arange(1, values.size + 1)
+        for moved, width in ((0.0, 2.0), (-1.0, 0.75), (1.0, 0.75)):
+            y = ratio * (values + moved * spread)
+            some = y > 0  # the axis is logarithmic
+            parts.append(polyline(rank[some], y[some], colour, width, "solid"))
+    return parts
+
+
 def read(scene: Scene, choices: Choices, look: Look) -> Spectrum:
     """Lay out the spectra of the sprinkling in front."""
     result = scene.result
@@ -80,6 +102,7 @@ def read(scene: Scene, choices: Choices, look: Look) -> Spectrum:
     return Spectrum(
         lines=Strokes.of(
             polyline(rank, scene.continuum, look.ink, 1.5, "solid"),
+            *_twin(scene, choices, look),
             *(
                 (limits.x_low, value, limits.x_high * 4, value, colour, 1.5, "dashed")
                 for value, colour, _ in cuts
@@ -107,7 +130,10 @@ def caution(scene: Scene, choices: Choices) -> str:
     if not result.certificate.met:
         return "Certificate not met: " + "; ".join(result.certificate.reasons) + "."
     mass = ", massless" if scene.setup.mass > 0 else ""
-    return (
-        f"Line: exact continuum spectrum{mass}; dashed: cuts. "
-        f"Certified complete above {result.patch.floor:.3g}."
-    )
+    certified = f"Certified complete above {result.patch.floor:.3g}."
+    if scene.setup.points.curved:  # its continuum has no closed form
+        twin = "" if front_of(scene, choices) is None else "; lines: twin"
+        return f"No exact line in a curved patch{twin}; dashed: cuts. {certified}"
+    if front_of(scene, choices) is None:
+        return f"Line: exact continuum spectrum{mass}; dashed: cuts. {certified}"
+    return f"Lines: exact continuum{mass}; twin of patch (accent), of regions (hues). {certified}"

@@ -88,15 +88,20 @@ def caution(scene: Scene, choices: Choices) -> str:
     """Say which points these are, and which regions hold too few."""
     result, plan = scene.result, scene.setup.sweeps
     few = [
-        region_letter(i) for i, r in enumerate(result.regions) if r.elements < plan.smallest_region
+        region_letter(i) for i, r in enumerate(result.regions) if r.counted < plan.smallest_region
     ]
     points = scene.setup.points
     source = {
         "poisson": f"Poisson sprinkling, seed {points.seed}",
         "fixed": f"fixed count, seed {points.seed}",
+        "lattice": f"Turned lattice, {points.oversampling} times the density",
+        "sobol": f"Sobol set, {points.oversampling} times the density",
         "file": f"points of {points.file}",
     }[points.kind]
-    text = f"{source}: {thousands(result.elements)} elements."
+    held = "points" if points.quasi_uniform else "elements"
+    text = f"{source}: {thousands(result.elements)} {held}."
+    if points.curved:
+        text += f" Curvature {points.curvature}, radius {points.radius:g}."
     if few:
         text += f" {', '.join(few)}: fewer than {plan.smallest_region}, below the scaling regime."
     return text

@@ -17,30 +17,33 @@ KERNEL_TOLERANCE = 1e-10
 """Eigenvalues below this multiple of the largest belong to the kernel of Delta."""
 
 
-def threshold(rule: Rule, *, own: int, union: int, regions: int) -> float:
+def threshold(rule: Rule, *, own: float, union: float, regions: int, ratio: float = 1.0) -> float:
     """Threshold of a rule on the positive eigenvalues of one operator.
 
     Parameters
     ----------
     rule : Rule
         The rule of this stage.
-    own : int
-        Elements of the operator's own region.
-    union : int
+    own : float
+        Elements of the operator's own region, n: points over `ratio`, weighted in curved patches
+        (`lozenge_engine.kernels.curved.Counting.elements`).
+    union : float
         Elements of all regions together.
     regions : int
         Number of regions.
+    ratio : float
+        Points laid per element, f: eigenvalues are f times larger at the same wavenumber.
 
     Returns
     -------
     float
-        alpha sqrt(n)/(4 pi) with the n of the rule (arXiv:1611.10281; for several regions
+        f alpha sqrt(n)/(4 pi) with the n of the rule (arXiv:1611.10281; for several regions
         arXiv:2110.07627); 0 for rules without a threshold.
     """
     counts = {"root_count": own, "union_count": union, "equal_share": union / regions}
     if rule.kind not in counts:
         return 0.0
-    return root_count_cut(counts[rule.kind], rule.alpha)
+    return ratio * root_count_cut(counts[rule.kind], rule.alpha)
 
 
 def keep(values: FloatArray, rule: Rule, *, cut: float) -> BoolArray:
@@ -99,22 +102,24 @@ def keep_by_support(
     return kept
 
 
-def needed_floor(rule: Rule, *, elements: int) -> float:
+def needed_floor(rule: Rule, *, elements: float, ratio: float = 1.0) -> float:
     """How far down the patch's modes have to be known for a rule of the patch's stage.
 
     Parameters
     ----------
     rule : Rule
         Rule of the patch's stage.
-    elements : int
+    elements : float
         Elements of the patch, N.
+    ratio : float
+        Points laid per element, f.
 
     Returns
     -------
     float
-        The threshold; for a fixed number the expected eigenvalue N/(2 pi (number + 2)); 0 when
+        The threshold; for a fixed number the expected eigenvalue f N/(2 pi (number + 2)); 0 when
         every mode is needed.
     """
     if rule.kind == "fixed_number":
-        return elements / (2.0 * np.pi * (rule.number + 2))
-    return threshold(rule, own=elements, union=elements, regions=1)
+        return ratio * elements / (2.0 * np.pi * (rule.number + 2))
+    return threshold(rule, own=elements, union=elements, regions=1, ratio=ratio)

@@ -15,7 +15,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from lozenge_engine.errors import refuse
-from lozenge_engine.geometry import PATCH_AREA, PATCH_EXTENT, Region, region_letter
+from lozenge_engine.geometry import (
+    PATCH,
+    PATCH_AREA,
+    PATCH_EXTENT,
+    Curvature,
+    Region,
+    region_letter,
+    volume,
+)
+from lozenge_engine.kernels.curved import conformal_factor
 
 __all__ = [
     "Coordinates",
@@ -34,6 +43,8 @@ SLAB_MEAN = 64
 """Expected elements in one slab of the sprinkling's density axis."""
 UNIT = 2.0**-53
 STREAM_TAG = 0x4C5A  # separates this stream from any other use of the same seed
+CHUNK = 4096
+"""Slabs drawn at a time."""
 
 
 class Coordinates(NamedTuple):
@@ -73,30 +84,43 @@ def _poisson_table() -> NDArray[np.uint64]:
 
 
 def sprinkle(
-    *, density: float, seed: int, realisation: int = 0, fixed: bool = False
+    *,
+    density: float,
+    seed: int,
+    realisation: int = 0,
+    fixed: bool = False,
+    curvature: Curvature = "flat",
+    radius: float = 1.0,
 ) -> Coordinates:
     """Sprinkle the patch; with one seed, a higher density only adds elements.
 
     A homogeneous Poisson process on (patch) x (density axis) is drawn slab by slab of the
     density axis, each slab from a record of fixed length of the generator's raw 64-bit output:
     one word for its Poisson count (by integer thresholds), three words for each element (its
-    place in the slab, u, v).  The sprinkling of density rho is what lies below rho.
+    place in the slab, u, v).  The sprinkling of density rho is what lies below rho; in a curved
+    patch, what lies below rho Omega^2 at its place, exact by thinning.
 
     Parameters
     ----------
     density : float
-        Elements per unit area, > 0; the patch has area 2.
+        Elements per unit volume, > 0; the flat patch has 2.
     seed : int
         0 <= seed < 2**53.
     realisation : int
         Number of the sprinkling, >= 0; each is independent of the others.
     fixed : bool
-        Take exactly round(2 density) elements, the lowest of the density axis.
+        Take exactly round(density times volume) elements, the lowest of the density axis: drawn
+        independently with the density Omega^2.
+    curvature : {"flat", "positive", "negative"}
+        Metric of the patch.
+    radius : float
+        Curvature radius > 2/pi in patch half-widths; unused when flat.
 
     Returns
     -------
     Coordinates
-        Ascending u; bit-identical on every platform.
+        Ascending u; bit-identical on every platform (in a curved patch up to the last bit of a
+        cosine, which decides on one element in 1e16).
 
     Raises
     ------
@@ -105,27 +129,43 @@ def sprinkle(
 
     Notes
     -----
-    Cost: 7 words of the generator and at the peak about 150 bytes per element; O(N log N) for
-    the sort.
+    Cost: 7 words of the generator for each element drawn, which are max(Omega^2) times those of
+    the flat patch; O(N log N) for the sort, about 100 bytes per element at the peak.
     """
-    target = PATCH_AREA * density
+    target = volume(PATCH, curvature=curvature, radius=radius) * density
+    highest = PATCH_AREA * density  # where the marks end that stand for this density
+    if fixed:
+        highest *= 1.0 + (10 * math.sqrt(target) + SLAB_MEAN) / target  # ten standard deviations
+    steepest = 1.0 if curvature == "flat" else math.cos(1.0 / radius) ** -2
     words = [seed & 0xFFFFFFFF, seed >> 32, realisation, STREAM_TAG]
     generator = np.random.PCG64(np.random.SeedSequence(words))
-    record = 1 + 3 * _poisson_table().size
-    slabs = math.ceil(target / SLAB_MEAN) + 1
+    slabs = math.ceil(highest * steepest * (1.0 + 1e-12) / SLAB_MEAN) + 1
+    parts: list[tuple[FloatArray, ...]] = []
+    for first in range(0, slabs, CHUNK):
+        mark, u, v = _slabs(generator, first, min(CHUNK, slabs - first))
+        if curvature != "flat":
+            mark = mark / conformal_factor(u, v, curvature=curvature, radius=radius)
+        chosen = mark < highest
+        parts.append((mark[chosen], u[chosen], v[chosen]))
+    mark, u, v = (np.concatenate(column) for column in zip(*parts, strict=True))
     if fixed:
-        slabs += math.ceil(10 * math.sqrt(target) / SLAB_MEAN) + 1  # ten standard deviations
-    raw = generator.random_raw(slabs * record).reshape(slabs, record)
-    counts = np.searchsorted(_poisson_table(), raw[:, 0], side="right")
-    taken = np.arange(_poisson_table().size) < counts[:, None]
-    unit = (raw[:, 1:].reshape(slabs, -1, 3)[taken] >> np.uint64(11)) * UNIT
-    mark = (np.nonzero(taken)[0] + unit[:, 0]) * SLAB_MEAN
-    if fixed:
-        chosen = np.argsort(mark, kind="stable")[: round(target)]
-    else:
-        chosen = np.nonzero(mark < target)[0]
-    u, v = ((unit[chosen, k] - 0.5) * (2 * PATCH_EXTENT) for k in (1, 2))
+        lowest = np.argsort(mark, kind="stable")[: round(target)]
+        u, v = u[lowest], v[lowest]
     return in_natural_order(u, v)
+
+
+def _slabs(
+    generator: np.random.PCG64, first: int, count: int
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Marks on the density axis and places u, v of the next slabs' elements."""
+    width = _poisson_table().size
+    raw = generator.random_raw(count * (1 + 3 * width)).reshape(count, 1 + 3 * width)
+    counts = np.searchsorted(_poisson_table(), raw[:, 0], side="right")
+    taken = np.arange(width) < counts[:, None]
+    unit = (raw[:, 1:].reshape(count, -1, 3)[taken] >> np.uint64(11)) * UNIT
+    mark: FloatArray = (first + np.nonzero(taken)[0] + unit[:, 0]) * SLAB_MEAN
+    places = np.asarray((unit[:, 1:] - 0.5) * (2 * PATCH_EXTENT), dtype=np.float64)
+    return mark, places[:, 0], places[:, 1]
 
 
 def golden_lattice(count: int, *, offset: tuple[float, float] = (0.25, 0.25)) -> Coordinates:
