@@ -179,7 +179,22 @@ def _evidence(options: argparse.Namespace) -> int:
 
 
 def _export(options: argparse.Namespace) -> int:
-    raise NotImplementedError
+    from lozenge_dashboard.export import export_preset, export_results
+
+    views = None if options.views is None else [n.strip() for n in options.views.split(",")]
+    if _is_results(options.what):
+        path = Path(options.what)
+        trusted = export_results(path, to=options.to, views=views, double=options.double)
+    else:
+        preset, found = find_preset(options.what)
+        trusted = export_preset(
+            preset,
+            to=options.to,
+            folder=found.parent if found else None,
+            views=views,
+            double=options.double,
+        )
+    return OK if trusted else NOT_TRUSTED
 
 
 def _bundle(options: argparse.Namespace) -> int:

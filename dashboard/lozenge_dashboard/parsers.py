@@ -203,7 +203,7 @@ def export_parser() -> Parser:
     parser.add_argument("--to", type=Path, metavar="DIR", required=True, help="folder to write to")
     parser.add_argument("--views", metavar="A,B", help="only these views, by name")
     parser.add_argument(
-        "--double", action="store_true", help="figures two columns wide instead of one"
+        "--double", action="store_true", help="figures two columns wide besides those of one"
     )
     return parser
 

@@ -1,0 +1,1 @@
+"""What a paper takes from a computation: figures, tables, methods, sources."""
