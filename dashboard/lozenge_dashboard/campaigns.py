@@ -82,11 +82,10 @@ def checked_name(text: object) -> str:
 
 def results_names(folder: Path) -> list[str]:
     """Results files of a folder, the latest first."""
-    found: list[tuple[float, str]] = []
     with contextlib.suppress(OSError):
         paths = [path for path in folder.glob(f"*{SUFFIX}") if path.is_file()]
-        found += [(-path.stat().st_mtime, path.name) for path in paths]
-    return [name for _, name in sorted(found)]
+        return [name for _, name in sorted((-path.stat().st_mtime, path.name) for path in paths)]
+    return []
 
 
 class Status(NamedTuple):
