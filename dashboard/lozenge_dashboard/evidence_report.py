@@ -128,7 +128,7 @@ def _table(preset: Preset, scene: EvidenceScene, refused: Mapping[str, str]) -> 
 
 
 def _plain(value: Any) -> Any:
-    """Records and arrays as plain JSON values; what is not finite is null."""
+    """Records and arrays as plain JSON values; what is not finite is null, i is (0, 1)."""
     if hasattr(value, "canonical_json"):
         return json.loads(value.canonical_json())
     if is_dataclass(value) and not isinstance(value, type):
@@ -141,6 +141,8 @@ def _plain(value: Any) -> Any:
         return {_key(key): _plain(part) for key, part in value.items()}
     if isinstance(value, tuple | list | set | frozenset):
         return [_plain(part) for part in value]
+    if isinstance(value, complex):
+        return [_plain(value.real), _plain(value.imag)]
     return plain(value.item() if hasattr(value, "item") else value)
 
 
