@@ -49,10 +49,16 @@ CHROMIUM_SWITCHES = (
 
 @pytest.hookimpl(tryfirst=True)
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
-    """Mark what needs a browser and what is a benchmark, before markers select."""
+    """Mark what needs a browser and what is a benchmark, before markers select.
+
+    Workers of pytest-xdist (``--dist loadgroup``) take whole files, whose tests share servers and
+    results; all that starts a browser stays with one of them, or browsers would starve each other.
+    """
     for item in items:
-        if "chromium_path" in getattr(item, "fixturenames", ()):
+        browser = "chromium_path" in getattr(item, "fixturenames", ())
+        if browser:
             item.add_marker("browser")
+        item.add_marker(pytest.mark.xdist_group("browser" if browser else str(item.path)))
         if HERE / "benchmarks" in item.path.parents:
             item.add_marker("benchmark")
 
