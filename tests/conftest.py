@@ -7,7 +7,7 @@ import os
 import shutil
 from collections.abc import Iterator
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 from urllib.parse import urlsplit
 
 import pytest
@@ -49,18 +49,28 @@ CHROMIUM_SWITCHES = (
 
 @pytest.hookimpl(tryfirst=True)
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
-    """Mark what needs a browser and what is a benchmark, before markers select.
-
-    Workers of pytest-xdist (``--dist loadgroup``) take whole files, whose tests share servers and
-    results; all that starts a browser stays with one of them, or browsers would starve each other.
-    """
+    """Mark what needs a browser and what is a benchmark, before markers select."""
     for item in items:
-        browser = "chromium_path" in getattr(item, "fixturenames", ())
-        if browser:
+        if "chromium_path" in getattr(item, "fixturenames", ()):
             item.add_marker("browser")
-        item.add_marker(pytest.mark.xdist_group("browser" if browser else str(item.path)))
         if HERE / "benchmarks" in item.path.parents:
             item.add_marker("benchmark")
+
+
+@pytest.hookimpl(optionalhook=True)
+def pytest_xdist_make_scheduler(config: pytest.Config, log: Any) -> Any:
+    """Give workers whole files, whose tests share servers and results.
+
+    All that starts a browser stays with one worker: two would starve each other.
+    """
+    from xdist.scheduler import LoadScopeScheduling
+
+    class ByFile(LoadScopeScheduling):
+        def _split_scope(self, nodeid: str) -> str:
+            file = nodeid.split("::", 1)[0]
+            return "browser" if file.startswith("tests/browser/") else file
+
+    return ByFile(config, log)
 
 
 @pytest.fixture(scope="session")
