@@ -21,6 +21,9 @@ STRATEGIES = {
     "bundle": damaged("bundle"),
     "results": damaged("results"),
     "points": damaged("points"),
+    "relation array": damaged("relation array"),
+    "relation market": damaged("relation market"),
+    "relation table": damaged("relation table"),
 }
 
 

@@ -18,7 +18,7 @@ from lozenge_engine.kernels.bitrows import (
     transposed,
     unpack_rows,
 )
-from lozenge_engine.kernels.relation import no_order
+from lozenge_engine.kernels.relation import CORRECT, no_order
 
 __all__ = ["BitCommutator", "BitOrder", "checked_order", "related"]
 
@@ -165,7 +165,10 @@ def _not_transitive(words: Words, i: int) -> InputError:
     reached = np.bitwise_or.reduce(words[future], axis=0) & ~words[i]
     j = first_bit(reached)
     k = next(k for k in future.tolist() if int(words[k, j // 64]) >> (j % 64) & 1)
-    return no_order(f"{i} precedes {k} and {k} precedes {j}, but {i} does not precede {j}")
+    return no_order(
+        f"{i} precedes {k} and {k} precedes {j}, but {i} does not precede {j}",
+        do=f"{CORRECT}, or have the relation closed",
+    )
 
 
 def _no_link(words: Words, later: Words, order: Index) -> InputError:
@@ -185,7 +188,7 @@ def _no_link(words: Words, later: Words, order: Index) -> InputError:
                 "links",
                 given=f"{i} precedes {j}, with {k} between them",
                 allowed="links alone: pairs with no element between",
-                do="leave that pair out, or give all relations without --links",
+                do="leave that pair out, or give all relations, not as links",
             )
     raise AssertionError("one entry is no link")  # pragma: no cover
 

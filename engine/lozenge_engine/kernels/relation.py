@@ -11,8 +11,9 @@ from scipy.sparse.csgraph import breadth_first_order, connected_components
 
 from lozenge_engine.errors import InputError, refuse
 
-__all__ = ["no_order", "strict_partial_order"]
+__all__ = ["CORRECT", "no_order", "strict_partial_order"]
 
+CORRECT = "correct these entries (element numbers count from 0)"
 _ROWS = 1024  # checked for transitivity at a time, to bound the memory
 
 
@@ -121,11 +122,24 @@ def _cycle(graph: csr_array, component: NDArray[np.int32]) -> list[int]:
     return cycle[::-1]
 
 
-def no_order(given: str) -> InputError:
-    """Build the error for a relation that is no strict partial order."""
+def no_order(given: str, *, do: str = CORRECT) -> InputError:
+    """Build the error for a relation that is no strict partial order.
+
+    Parameters
+    ----------
+    given : str
+        The violation.
+    do : str
+        What to do, as an imperative clause.
+
+    Returns
+    -------
+    InputError
+        The error, for the caller to raise.
+    """
     return refuse(
         "relations",
         given=given,
         allowed="a strict partial order: irreflexive, antisymmetric, acyclic, transitive",
-        do="correct these entries (element numbers count from 0)",
+        do=do,
     )
