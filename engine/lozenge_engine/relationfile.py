@@ -237,7 +237,7 @@ class _Pairs(NamedTuple):
 
     earlier: array.array[int]
     later: array.array[int]
-    count: int
+    entries: int
 
 
 def _market_pairs(body: Body, where: str, n: int, width: int) -> _Pairs:

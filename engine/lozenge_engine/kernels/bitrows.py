@@ -121,12 +121,12 @@ def pack_pairs(earlier: Index, later: Index, *, elements: int) -> Words:
             allowed="every pair once",
             do="leave one of them out (element numbers count from 0)",
         )
-    i, j = np.divmod(code, elements)
+    rows, columns = np.divmod(code, elements)
     words = np.zeros((elements, words_of(elements)), dtype=np.uint64)
-    place = i * words.shape[1] + j // 64
+    place = rows * words.shape[1] + columns // 64
     if place.size:
         starts = np.flatnonzero(np.diff(place, prepend=-1))
-        bits = np.uint64(1) << (j % 64).astype(np.uint64)
+        bits = np.uint64(1) << (columns % 64).astype(np.uint64)
         words.ravel()[place[starts]] = np.bitwise_or.reduceat(bits, starts)
     return words
 

@@ -27,7 +27,20 @@ _PANEL_OUT = types.Array(types.float64, 2, "C")
 
 
 def compile_loop(loop: Loop, *arguments: Any) -> Loop:
-    """Compile a loop, with numba's cache on disk where it has a folder it can write."""
+    """Compile a loop, with numba's cache on disk where it has a folder it can write.
+
+    Parameters
+    ----------
+    loop : callable
+        Returns nothing.
+    *arguments : numba types
+        Of its arguments.
+
+    Returns
+    -------
+    callable
+        The compiled loop, which releases the interpreter lock.
+    """
     signature = types.void(*arguments)
     try:
         compiled: Loop = numba.njit(signature, nogil=True, cache=True)(loop)
