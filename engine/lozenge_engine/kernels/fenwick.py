@@ -14,7 +14,7 @@ import numba
 import numpy as np
 from numba import types
 
-__all__ = ["compile_loop", "massless_loop", "panel_tree_loop", "vector_tree_loop"]
+__all__ = ["massless_loop", "panel_tree_loop", "vector_tree_loop"]
 
 Loop = Callable[..., None]
 
