@@ -89,6 +89,8 @@ class OwnResult:
         Second stage; the geometry in them stands for none.
     region_orderings : tuple of Comparison
         As `ordering`, for each region alone.
+    between : tuple of int
+        Elements that lie between those of a region without being in it; 0 for a diamond.
     related : mapping of (int, int) to int
         Relations between the elements of every two regions, either way; 0 for spacelike ones.
     unions, total_correlation, pairs, triples : as in `lozenge_engine.result.Result`
@@ -108,6 +110,7 @@ class OwnResult:
     members: tuple[Index, ...]
     regions: tuple[RegionResult, ...]
     region_orderings: tuple[Comparison, ...]
+    between: tuple[int, ...]
     related: Mapping[tuple[int, int], int]
     unions: Mapping[str, UnionResult]
     total_correlation: Mapping[str, float]
@@ -155,6 +158,12 @@ class OwnResult:
                     f"the ordering fraction of region {region_letter(k)} {_beside(one, '.4f')}: "
                     "its elements are no sprinkled diamond"
                 )
+        for k, others in enumerate(self.between):
+            if others:
+                notes.append(
+                    f"region {region_letter(k)} is not causally convex: {others} elements lie "
+                    "between its own and are not in it; no diamond is like that"
+                )
         for (a, b), pairs in self.related.items():
             if pairs:
                 notes.append(
@@ -185,12 +194,15 @@ class OwnResult:
                 {
                     "elements": r.elements,
                     "ordering_fraction": _comparison(one),
+                    "elements_between": between,
                     "kept_modes": r.kept_modes,
                     "nominal_modes": r.nominal_modes,
                     "entropy": _plain(r.entropy),
                     "status": r.status,
                 }
-                for r, one in zip(self.regions, self.region_orderings, strict=True)
+                for r, one, between in zip(
+                    self.regions, self.region_orderings, self.between, strict=True
+                )
             ],
             "union": {
                 k: {"kept_modes": u.kept_modes, "entropy": _plain(u.entropy), "status": u.status}

@@ -20,7 +20,7 @@ from lozenge_engine.entropies import Block, Entropies
 from lozenge_engine.errors import refuse
 from lozenge_engine.geometry import equal_row
 from lozenge_engine.kernels import cuts, gaussian, laws, modes
-from lozenge_engine.kernels.bitorder import BitCommutator, BitOrder, checked_order, related
+from lozenge_engine.kernels.bitorder import BitCommutator, BitOrder, between, checked_order, related
 from lozenge_engine.ownresult import OwnResult, OwnSet, count_of, ordering_of
 from lozenge_engine.pipeline import MARGIN, versions
 from lozenge_engine.relationfile import RelationFile
@@ -125,6 +125,7 @@ def compute_own(
         region_orderings=tuple(
             ordering_of(related(own.order, rows, rows), rows.size) for rows in members
         ),
+        between=tuple(between(own.order, rows) for rows in members),
         related={
             (a, b): related(own.order, members[a], members[b])
             + related(own.order, members[b], members[a])

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from lozenge_engine.errors import InputError
-from lozenge_engine.kernels.bitorder import BitCommutator, checked_order, related
+from lozenge_engine.kernels.bitorder import BitCommutator, between, checked_order, related
 from lozenge_engine.kernels.bitrows import (
     first_bit,
     members,
@@ -235,3 +235,18 @@ def test_relations_between_elements_are_counted() -> None:
     a, b = rng.permutation(300)[:80], rng.permutation(300)[:130]
     assert related(order, a, b) == c[np.ix_(a, b)].sum()
     assert related(order, np.arange(300), np.arange(300)) == order.relations
+
+
+def test_what_lies_between_elements_is_counted() -> None:
+    c = causal(300)
+    order = checked_order(pack_rows(c))
+    rng = np.random.default_rng(6)
+    chosen = rng.permutation(300)[:12]
+    expected = c[chosen].any(axis=0) & c[:, chosen].any(axis=1)
+    expected[chosen] = False
+    assert between(order, chosen) == expected.sum() > 0
+    i = int(np.argmax(c.sum(axis=1)))
+    j = int(np.flatnonzero(c[i])[-1])
+    interval = np.flatnonzero((c[i] & c[:, j]) | np.isin(np.arange(300), (i, j)))
+    assert between(order, interval) == 0
+    assert between(order, interval[:0]) == 0

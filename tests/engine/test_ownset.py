@@ -181,6 +181,15 @@ def test_regions_that_are_not_spacelike_are_told() -> None:
     )
 
 
+def test_a_region_with_others_between_its_elements_is_told() -> None:
+    rows = lists(sprinkled())[0]
+    mine = compute_own(own().own, members=[rows[::2]])
+    assert mine.between[0] > 0
+    assert own().between == (0, 0, 0)
+    text = f"region A is not causally convex: {mine.between[0]} elements lie between its own"
+    assert any(text in note for note in mine.mismatches())
+
+
 def test_a_set_without_relations_is_refused() -> None:
     with pytest.raises(InputError, match="given no relations"):
         given(np.zeros((9, 9), dtype=bool))

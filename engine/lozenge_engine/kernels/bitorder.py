@@ -20,7 +20,7 @@ from lozenge_engine.kernels.bitrows import (
 )
 from lozenge_engine.kernels.relation import CORRECT, no_order
 
-__all__ = ["BitCommutator", "BitOrder", "checked_order", "related"]
+__all__ = ["BitCommutator", "BitOrder", "between", "checked_order", "related"]
 
 Words = NDArray[np.uint64]
 Index = NDArray[np.intp]
@@ -216,6 +216,36 @@ def related(order: BitOrder, earlier: Index, later: Index) -> int:
         int(np.bitwise_count(order.later[place[earlier[rows]]] & wanted).sum(dtype=np.int64))
         for rows in blocks(earlier.size)
     )
+
+
+def between(order: BitOrder, elements: Index) -> int:
+    """Count what lies between some elements without being one of them.
+
+    Parameters
+    ----------
+    order : BitOrder
+        The order.
+    elements : ndarray of intp
+        Numbers of elements.
+
+    Returns
+    -------
+    int
+        Others that one of them precedes and that precede one of them; 0 for a causally convex
+        set, such as a diamond. Cost n^2/64 at most.
+    """
+    n = order.elements
+    place = np.argsort(order.order)[elements]
+    inside = np.zeros(n, dtype=np.bool_)
+    inside[place] = True
+    mask = pack_rows(inside[None])[0]
+    after = np.zeros(n, dtype=np.bool_)
+    if place.size:
+        after = unpack_rows(np.bitwise_or.reduce(order.later[place], axis=0)[None], n)[0] > 0
+    before = np.zeros(n, dtype=np.bool_)
+    for rows in blocks(n):
+        before[rows] = (order.later[rows] & mask).any(axis=1)
+    return int((after & before & ~inside).sum())
 
 
 class BitCommutator:
