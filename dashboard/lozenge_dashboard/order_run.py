@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import json
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 from lozenge_dashboard.curves import RULE_WORDS, aligned, wrapped
@@ -21,6 +24,8 @@ __all__ = ["order_text", "run_order"]
 
 SMALLEST = 80
 """Elements below which a region is not in the scaling regime."""
+SHOW_PROGRESS_FROM = 4000
+"""Elements from which progress is shown on a terminal."""
 
 
 def run_order(
@@ -73,7 +78,8 @@ def run_order(
     Rule(alpha=alpha)  # refused before anything is read
     own = own_set(read_relation(path), close=close, only_links=only_links)
     members = () if regions is None else read_members(regions, elements=own.order.elements)
-    result = compute_own(own, members=members, alpha=alpha)
+    with _progress(own.order.elements) as report:
+        result = compute_own(own, members=members, alpha=alpha, report=report)
     data = (json.dumps(result.numbers(), indent=2, allow_nan=False) + "\n").encode()
     if json_file == STANDARD_OUTPUT:
         put(data.decode())
@@ -82,6 +88,21 @@ def run_order(
             write_bytes(json_file, data)
         put(order_text(result))
     return result.trusted and not result.mismatches()
+
+
+@contextmanager
+def _progress(elements: int) -> Iterator[Callable[[float], None]]:
+    """A bar, on a terminal and for large sets only."""
+    if elements < SHOW_PROGRESS_FROM or not sys.stderr.isatty():
+        yield lambda _fraction: None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+    columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("modes", total=1.0)
+        yield lambda fraction: bar.update(task, completed=fraction)
 
 
 def order_text(result: OwnResult) -> str:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import hashlib
 import itertools
+import math
 import time
 from collections.abc import Callable, Sequence
 from typing import Any
@@ -31,6 +32,9 @@ __all__ = ["compute_own", "own_set"]
 
 Index = NDArray[np.intp]
 Report = Callable[[float], None]
+
+MOST_BYTES = 4e9
+"""Memory of the modes and of the space they are searched in."""
 
 
 def own_set(file: RelationFile, *, close: bool = False, only_links: bool = False) -> OwnSet:
@@ -95,7 +99,7 @@ def compute_own(
     Raises
     ------
     InputError
-        If alpha is out of range.
+        If alpha is out of range, or so low that the modes take more than 4 GB.
 
     Notes
     -----
@@ -103,6 +107,7 @@ def compute_own(
     product; n^2/4 bytes beyond its own.
     """
     rule = Rule(alpha=alpha)
+    _check_memory(own.order.elements, rule.alpha)
     seconds: dict[str, float] = {}
     with blas_threads(1):
         start = time.perf_counter()
@@ -135,6 +140,20 @@ def compute_own(
         versions=versions(),
         **parts,
     )
+
+
+def _check_memory(elements: int, alpha: float) -> None:
+    """Refuse a threshold so low that the modes do not fit, before anything is computed."""
+    found = min(elements / 2, 2.0 * math.sqrt(elements) / (MARGIN * min(alpha, 1.0)))
+    dimension = min(elements, modes.RATIO * found + 24)
+    needed = 8.8 * elements * dimension + 16.0 * elements * found
+    if needed > MOST_BYTES:
+        raise refuse(
+            "alpha",
+            given=f"{alpha:g} with {elements} elements: modes of {needed / 1e9:.2g} GB",
+            allowed=f"modes of at most {MOST_BYTES / 1e9:g} GB",
+            do="raise alpha, or give a smaller set",
+        )
 
 
 def _first_stage(

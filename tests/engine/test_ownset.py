@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.errors import InputError
+from lozenge_engine.kernels.bitorder import BitOrder
 from lozenge_engine.kernels.bitrows import pack_rows
 from lozenge_engine.kernels.gaussian import contributions
 from lozenge_engine.ownresult import ASSUMPTION, OwnResult, OwnSet, count_of, ordering_of
@@ -199,6 +200,14 @@ def test_a_set_without_relations_is_refused() -> None:
 def test_alpha_out_of_range_is_refused(alpha: float) -> None:
     with pytest.raises(InputError, match=r"allowed is 0\.05 to 20"):
         compute_own(own().own, alpha=alpha)
+
+
+def test_a_threshold_whose_modes_do_not_fit_is_refused_before_any_work() -> None:
+    n = 20_000
+    nothing = np.zeros((0, 0), dtype=np.uint64)
+    order = BitOrder(np.arange(n), nothing, 1, 1, 0)
+    with pytest.raises(InputError, match=r"alpha: given 0\.05 with 20000 elements: modes of 5"):
+        compute_own(OwnSet("large.npy", order, ""), alpha=0.05)
 
 
 def test_the_scatter_of_ordering_fractions_is_that_of_random_permutations() -> None:
