@@ -155,8 +155,9 @@ def _from_npy(path: Path, where: str) -> Words:
             if len(data) < rows * n * dtype.itemsize:
                 raise _no_npy(where, "a file that ends early")
             block = np.frombuffer(data, dtype=dtype).reshape(rows, n)
-            ones = block == 1
-            odd = ~(ones | (block == 0))
+            with np.errstate(invalid="ignore"):  # of signalling NaN
+                ones = block == 1
+                odd = ~(ones | (block == 0))
             if odd.any():
                 i, j = (int(k[0]) for k in np.nonzero(odd))
                 entry = (j, start + i) if by_columns else (start + i, j)

@@ -29,7 +29,7 @@ from lozenge_engine.plan import Axis, CampaignPlan
 from lozenge_engine.pointfile import parse_points
 from lozenge_engine.presets import FIRST, Preset, dumps, parse, shipped
 from lozenge_engine.realisation import realise
-from lozenge_engine.relationfile import read_relation
+from lozenge_engine.relationfile import read_members, read_relation
 
 Reader = Callable[[bytes], object]
 
@@ -100,6 +100,13 @@ def _relation(suffix: str) -> Reader:
     return read
 
 
+def _read_members(data: bytes) -> object:
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / "odd.csv"
+        path.write_bytes(data)
+        return read_members(path, elements=40)
+
+
 def _square(*pairs: tuple[int, int]) -> bytes:
     """A relation of six elements as a NumPy file."""
     table = np.zeros((6, 6), dtype=bool)
@@ -126,6 +133,7 @@ def targets() -> dict[str, Target]:
         f"{i + 1} {j + 1}\n" for i, j in links
     )
     pairs = "earlier,later\n" + "".join(f"{i},{j}\n" for i, j in links)
+    lists = "region,element\n" + "".join(f"{'AB'[k % 2]},{k}\n" for k in range(12))
     table = "t,x\n" + "".join(f"{0.01 * k},{0.007 * k - 0.3}\n" for k in range(40))
     return {
         "preset": Target(dumps(preset).encode(), parse),
@@ -135,6 +143,7 @@ def targets() -> dict[str, Target]:
         "relation array": Target(_square(*links), _relation(".npy")),
         "relation market": Target(market.encode(), _relation(".mtx")),
         "relation table": Target(pairs.encode(), _relation(".csv")),
+        "relation regions": Target(lists.encode(), _read_members),
         "points": Target(table.encode(), lambda data: parse_points(data, name="odd.csv")),
     }
 

@@ -168,6 +168,15 @@ def test_a_long_cycle_behind_many_elements_is_found() -> None:
         checked_order(pack_rows(c), close=True)
 
 
+def test_a_cycle_in_a_dense_relation_is_found_at_once() -> None:
+    n = 3000
+    c = np.triu(np.ones((n, n), dtype=bool), 1)
+    c[0, n - 1] = False
+    c[n - 1, 0] = True
+    with pytest.raises(InputError, match=r"given 0 precedes (\d+) precedes 2999 precedes 0;"):
+        checked_order(pack_rows(c))
+
+
 # ----------------------------------------------------------------------- closure
 
 

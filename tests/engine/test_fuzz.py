@@ -23,6 +23,7 @@ STRATEGIES = {
     "points": damaged("points"),
     "relation array": damaged("relation array"),
     "relation market": damaged("relation market"),
+    "relation regions": damaged("relation regions"),
     "relation table": damaged("relation table"),
 }
 
