@@ -48,7 +48,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except InputError as error:
         return _say(str(error), BAD_INPUT)
     except MemoryError:
-        return _say("not enough memory for this preset; lower its density", BAD_INPUT)
+        return _say(
+            "not enough memory for this; lower the density or the number of elements", BAD_INPUT
+        )
     except KeyboardInterrupt:
         return _say("stopped by Ctrl-C", STOPPED)
 
@@ -197,6 +199,20 @@ def _export(options: argparse.Namespace) -> int:
     return OK if trusted else NOT_TRUSTED
 
 
+def _order(options: argparse.Namespace) -> int:
+    from lozenge_dashboard.order_run import run_order
+
+    done = run_order(
+        options.file,
+        only_links=options.links,
+        close=options.close,
+        regions=options.regions,
+        alpha=options.alpha,
+        json_file=options.json,
+    )
+    return OK if done else NOT_TRUSTED
+
+
 def _bundle(options: argparse.Namespace) -> int:
     from lozenge_dashboard.bundle_run import bundle_of_preset, bundle_of_results, save_bundle
     from lozenge_engine.document import check_writable
@@ -303,6 +319,7 @@ COMMANDS = {
     "results": _Command(parsers.results_parser, _results),
     "evidence": _Command(parsers.evidence_parser, _evidence),
     "export": _Command(parsers.export_parser, _export),
+    "order": _Command(parsers.order_parser, _order),
     "bundle": _Command(parsers.bundle_parser, _bundle),
     "verify": _Command(parsers.verify_parser, _verify),
     "presets": _Command(parsers.presets_parser, _list),

@@ -13,6 +13,7 @@ __all__ = [
     "bundle_parser",
     "evidence_parser",
     "export_parser",
+    "order_parser",
     "plan_parser",
     "presets_parser",
     "results_parser",
@@ -43,6 +44,7 @@ def serve_parser() -> Parser:
         "FILE' runs it, 'lozenge results FILE' prints what it found, 'lozenge evidence' sets it "
         "beside independent routes; 'lozenge export' writes figures and tables; 'lozenge bundle' "
         "packs a preset or results for somebody else, 'lozenge verify' computes a bundle again; "
+        "'lozenge order' computes a causal set of your own from its relations; "
         "'lozenge presets' lists the presets that come with the program. Each knows --help.",
     )
     parser.add_argument("-V", "--version", action="version", version=f"lozenge {__version__}")
@@ -204,6 +206,49 @@ def export_parser() -> Parser:
     parser.add_argument("--views", metavar="A,B", help="only these views, by name")
     parser.add_argument(
         "--double", action="store_true", help="figures two columns wide besides those of one"
+    )
+    return parser
+
+
+def order_parser() -> Parser:
+    """Make the arguments of ``lozenge order``."""
+    parser = Parser(
+        prog="lozenge order",
+        description="Compute a causal set of your own, of 4 to 20 000 elements, from its "
+        "relations: modes, and the entropies of regions given by lists of elements. Assumes a 1+1 "
+        "sprinkling, and says where the set is none.",
+        epilog="Files: .npy, a square array, entry (i, j) true iff i precedes j; .mtx, Matrix "
+        "Market, numbers from 1; .csv, columns earlier and later, numbers from 0. Exit status: 0 "
+        "done; 2 bad input; 3 computed, but the certificate is not met, a number carries a mark, "
+        "or the set does not look like what is assumed; 130 stopped by Ctrl-C.",
+    )
+    parser.add_argument("file", type=Path, metavar="FILE", help=".npy, .mtx or .csv")
+    parser.add_argument(
+        "--links", action="store_true", help="FILE holds links alone; they are checked and closed"
+    )
+    parser.add_argument(
+        "--close",
+        action="store_true",
+        help="add the relations that transitivity asks for, instead of refusing",
+    )
+    parser.add_argument(
+        "--regions",
+        type=Path,
+        metavar="CSV",
+        help="elements of regions: columns region (A, B, ...) and element (from 0)",
+    )
+    parser.add_argument(
+        "--alpha",
+        type=float,
+        metavar="A",
+        default=1.0,
+        help="multiple of the threshold sqrt(n)/(4 pi) in both stages, 0.05 to 20",
+    )
+    parser.add_argument(
+        "--json",
+        type=Path,
+        metavar="FILE",
+        help="write the numbers as JSON; - for the standard output, instead of the table",
     )
     return parser
 

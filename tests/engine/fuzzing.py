@@ -7,6 +7,7 @@ the time and memory that each takes.
 from __future__ import annotations
 
 import functools
+import io
 import json
 import tempfile
 from collections.abc import Callable
@@ -14,6 +15,7 @@ from pathlib import Path
 from typing import Any, NamedTuple
 from urllib.parse import quote
 
+import numpy as np
 from hypothesis import strategies as st
 
 from lozenge_engine import address, bundle, store
@@ -21,11 +23,13 @@ from lozenge_engine.bundle import Bundle
 from lozenge_engine.config import PointSource, Setup
 from lozenge_engine.errors import InputError
 from lozenge_engine.estimates import estimates
+from lozenge_engine.ownset import own_set
 from lozenge_engine.pipeline import versions
 from lozenge_engine.plan import Axis, CampaignPlan
 from lozenge_engine.pointfile import parse_points
 from lozenge_engine.presets import FIRST, Preset, dumps, parse, shipped
 from lozenge_engine.realisation import realise
+from lozenge_engine.relationfile import read_members, read_relation
 
 Reader = Callable[[bytes], object]
 
@@ -84,6 +88,35 @@ def _read_results(data: bytes) -> object:
             return estimates(results)
 
 
+def _relation(suffix: str) -> Reader:
+    """Reads a causal set as a file of one kind, and checks its order."""
+
+    def read(data: bytes) -> object:
+        with tempfile.TemporaryDirectory() as folder:
+            path = Path(folder) / f"odd{suffix}"
+            path.write_bytes(data)
+            return own_set(read_relation(path), close=True)
+
+    return read
+
+
+def _read_members(data: bytes) -> object:
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / "odd.csv"
+        path.write_bytes(data)
+        return read_members(path, elements=40)
+
+
+def _square(*pairs: tuple[int, int]) -> bytes:
+    """A relation of six elements as a NumPy file."""
+    table = np.zeros((6, 6), dtype=bool)
+    for i, j in pairs:
+        table[i, j] = True
+    file = io.BytesIO()
+    np.save(file, table)
+    return file.getvalue()
+
+
 def _address(data: bytes) -> object:
     found = address.read_query(data.decode("latin-1"))
     assert isinstance(found.preset, Preset)
@@ -95,12 +128,22 @@ def targets() -> dict[str, Target]:
     """All readers of files and addresses that come from outside, by name."""
     preset = shipped()[FIRST]
     packed = Bundle(preset, "kind,seed\npoisson,1\n", versions(), {"a.svg": b"<svg/>"})
+    links = [(0, 1), (1, 3), (0, 2), (2, 4), (4, 5)]
+    market = "%%MatrixMarket matrix coordinate pattern general\n6 6 5\n" + "".join(
+        f"{i + 1} {j + 1}\n" for i, j in links
+    )
+    pairs = "earlier,later\n" + "".join(f"{i},{j}\n" for i, j in links)
+    lists = "region,element\n" + "".join(f"{'AB'[k % 2]},{k}\n" for k in range(12))
     table = "t,x\n" + "".join(f"{0.01 * k},{0.007 * k - 0.3}\n" for k in range(40))
     return {
         "preset": Target(dumps(preset).encode(), parse),
         "address": Target(address.query_of(preset).encode(), _address),
         "bundle": Target(bundle.pack(packed), bundle.unpack),
         "results": Target(_results(), _read_results),
+        "relation array": Target(_square(*links), _relation(".npy")),
+        "relation market": Target(market.encode(), _relation(".mtx")),
+        "relation table": Target(pairs.encode(), _relation(".csv")),
+        "relation regions": Target(lists.encode(), _read_members),
         "points": Target(table.encode(), lambda data: parse_points(data, name="odd.csv")),
     }
 

@@ -21,6 +21,10 @@ STRATEGIES = {
     "bundle": damaged("bundle"),
     "results": damaged("results"),
     "points": damaged("points"),
+    "relation array": damaged("relation array"),
+    "relation market": damaged("relation market"),
+    "relation regions": damaged("relation regions"),
+    "relation table": damaged("relation table"),
 }
 
 

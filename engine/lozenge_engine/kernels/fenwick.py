@@ -26,8 +26,21 @@ _VECTOR_OUT = types.Array(types.float64, 1, "C")
 _PANEL_OUT = types.Array(types.float64, 2, "C")
 
 
-def _compile(loop: Loop, *arguments: Any) -> Loop:
-    """Compile a loop, with numba's cache on disk where it has a folder it can write."""
+def compile_loop(loop: Loop, *arguments: Any) -> Loop:
+    """Compile a loop, with numba's cache on disk where it has a folder it can write.
+
+    Parameters
+    ----------
+    loop : callable
+        Returns nothing.
+    *arguments : numba types
+        Of its arguments.
+
+    Returns
+    -------
+    callable
+        The compiled loop, which releases the interpreter lock.
+    """
     signature = types.void(*arguments)
     try:
         compiled: Loop = numba.njit(signature, nogil=True, cache=True)(loop)
@@ -109,7 +122,7 @@ def massless_loop() -> Loop:
         x : (n,) float64; by_v : (n,) intp, the elements in ascending v; out : (n,) float64.
         All C-contiguous. Cost O(n).
     """
-    return _compile(_massless, _VECTOR, _INDEX, _VECTOR_OUT)
+    return compile_loop(_massless, _VECTOR, _INDEX, _VECTOR_OUT)
 
 
 @cache
@@ -123,7 +136,7 @@ def vector_tree_loop() -> Loop:
         backward : bool, C if true and C^T if false; out : (n,) float64, receives
         C (1 + coupling C)^-1 x. All C-contiguous. Cost O(n log n), work space n numbers.
     """
-    return _compile(_vector_tree, _VECTOR, _INDEX, types.float64, types.boolean, _VECTOR_OUT)
+    return compile_loop(_vector_tree, _VECTOR, _INDEX, types.float64, types.boolean, _VECTOR_OUT)
 
 
 @cache
@@ -136,4 +149,4 @@ def panel_tree_loop() -> Loop:
         As `vector_tree_loop`, with x and out (n, s) float64 C-contiguous.
         Cost O(s n log n), work space s n numbers.
     """
-    return _compile(_panel_tree, _PANEL, _INDEX, types.float64, types.boolean, _PANEL_OUT)
+    return compile_loop(_panel_tree, _PANEL, _INDEX, types.float64, types.boolean, _PANEL_OUT)

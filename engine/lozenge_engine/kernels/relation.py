@@ -11,8 +11,9 @@ from scipy.sparse.csgraph import breadth_first_order, connected_components
 
 from lozenge_engine.errors import InputError, refuse
 
-__all__ = ["strict_partial_order"]
+__all__ = ["CORRECT", "no_order", "strict_partial_order"]
 
+CORRECT = "correct these entries (element numbers count from 0)"
 _ROWS = 1024  # checked for transitivity at a time, to bound the memory
 
 
@@ -93,21 +94,21 @@ def _first(mask: Any) -> tuple[int, int] | None:
 def _check_order(c: Any) -> None:
     """Refuse what is no strict partial order, naming the first violation."""
     if c.diagonal().any():
-        raise _no_order(f"{int(np.argmax(c.diagonal()))} precedes itself")
+        raise no_order(f"{int(np.argmax(c.diagonal()))} precedes itself")
     if both := _first(c * c.T):
         i, j = both
-        raise _no_order(f"{i} precedes {j} and {j} precedes {i}")
+        raise no_order(f"{i} precedes {j} and {j} precedes {i}")
     graph = csr_array(c)
     count, component = connected_components(graph, connection="strong")
     if count < c.shape[0]:
-        raise _no_order(" precedes ".join(map(str, _cycle(graph, component))))
+        raise no_order(" precedes ".join(map(str, _cycle(graph, component))))
     ones = c.astype(np.float32)
     for start in range(0, c.shape[0], _ROWS):
         rows = ones[start : start + _ROWS]
         if missing := _first((rows @ ones > 0) > (rows > 0)):
             i, j = start + missing[0], missing[1]
             k = int(np.argmax((c[[i]] * c[:, [j]].T).sum(axis=0)))
-            raise _no_order(f"{i} precedes {k} and {k} precedes {j}, but {i} does not precede {j}")
+            raise no_order(f"{i} precedes {k} and {k} precedes {j}, but {i} does not precede {j}")
 
 
 def _cycle(graph: csr_array, component: NDArray[np.int32]) -> list[int]:
@@ -121,11 +122,24 @@ def _cycle(graph: csr_array, component: NDArray[np.int32]) -> list[int]:
     return cycle[::-1]
 
 
-def _no_order(given: str) -> InputError:
-    """Build the error for a relation that is no strict partial order."""
+def no_order(given: str, *, do: str = CORRECT) -> InputError:
+    """Build the error for a relation that is no strict partial order.
+
+    Parameters
+    ----------
+    given : str
+        The violation.
+    do : str
+        What to do, as an imperative clause.
+
+    Returns
+    -------
+    InputError
+        The error, for the caller to raise.
+    """
     return refuse(
         "relations",
         given=given,
         allowed="a strict partial order: irreflexive, antisymmetric, acyclic, transitive",
-        do="correct these entries (element numbers count from 0)",
+        do=do,
     )
