@@ -20,6 +20,7 @@ __all__ = ["Opening", "Shelf", "Trail", "named", "opening_of"]
 POINT_FILES = 20
 """Imported points that a reload finds again without their file."""
 HASH_SHOWN = 12
+REST = "What was not taken is as in the first shipped preset; everything else in it holds."
 Name = tuple[str, str]
 """Title and sentence."""
 
@@ -115,7 +116,7 @@ def opening_of(
         return Opening(first, first, shelf.of(first), reason, query)
     origin = origins.get((preset.title, preset.sentence), preset)
     words = " ".join(faults)
-    reason = f"From the address: {words} Everything else in it holds." if faults else ""
+    reason = f"From the address: {words} {REST}" if faults else ""
     return Opening(preset, origin, shelf.of(preset), reason, query)
 
 

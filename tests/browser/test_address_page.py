@@ -177,6 +177,17 @@ def test_dragging_writes_no_address_and_its_end_makes_one_entry(bench: Page) -> 
     assert bench.evaluate("() => history.length") == entries + 1
 
 
+def test_held_key_drags_and_makes_one_entry_when_it_is_let_go(bench: Page) -> None:
+    entries = bench.evaluate("() => history.length")
+    slider = bench.get_by_role("slider", name="separation d")
+    slider.focus()
+    for _ in range(6):  # the first makes an entry, the others are its repetitions
+        bench.keyboard.down("ArrowRight")
+    bench.keyboard.up("ArrowRight")
+    wait_at(bench, "separation", 0.13)
+    assert bench.evaluate("() => history.length") <= entries + 2
+
+
 def test_link_is_copied(bench: Page) -> None:
     bench.context.grant_permissions(["clipboard-read", "clipboard-write"])
     type_into(bench, "separation", 0.2)

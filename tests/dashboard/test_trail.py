@@ -14,6 +14,8 @@ from bokeh.document import Document
 from panel.io.state import set_curdoc
 from tests.dashboard.scenes import SMALL, STAGES, bare
 
+from lozenge_dashboard.bundle_rows import layout_of
+from lozenge_dashboard.campaign_files import sample_columns
 from lozenge_dashboard.exchange import as_preset
 from lozenge_dashboard.jobs import Workshop
 from lozenge_dashboard.server import Server
@@ -22,6 +24,7 @@ from lozenge_dashboard.trail import POINT_FILES, Opening, Shelf, Trail, named, o
 from lozenge_dashboard.views.catalogue import register_all
 from lozenge_engine.address import query_of
 from lozenge_engine.bundle import Bundle, pack
+from lozenge_engine.plan import Axis, CampaignPlan
 from lozenge_engine.pointfile import PointFile, parse_points
 from lozenge_engine.presets import Preset, ViewState, dumps, shipped
 
@@ -323,6 +326,36 @@ def test_bundle_opens_its_preset_and_says_what_else_it_holds(pages: Pages) -> No
     assert "1 figure" in heading(session)["agreement"]
     put(session, "separation", 0.2)
     assert heading(session)["agreement"] == ""
+
+
+def with_samples(rows: int, *, column: str = "") -> bytes:
+    """A bundle whose samples have the campaign's columns and so many rows."""
+    plan = CampaignPlan(axes=(Axis(name="density", values=(60.0, 90.0)),), realisations=3)
+    sent = replace(FIRST, campaign=plan)
+    layout = layout_of(sent)
+    columns = sample_columns(layout)
+    own = layout.sprinklings[0]
+    row = [own.kind, repr(own.density), "0", *("0" for _ in columns[3:])]
+    head = [*columns[:-1], column or columns[-1]]
+    text = "".join(",".join(line) + "\n" for line in (head, *[row] * rows))
+    return pack(Bundle(sent, text, {"python": "3"}, {}))
+
+
+@pytest.mark.parametrize(("rows", "words"), [(1, "1 sample"), (253, "253 samples")])
+def test_samples_of_a_bundle_are_named(pages: Pages, rows: int, words: str) -> None:
+    session = pages.open()
+    give(session, "bundle", "sent.zip", with_samples(rows))
+    assert heading(session)["agreement"] == (
+        f"The bundle holds {words}: lozenge verify checks them."
+    )
+
+
+def test_samples_of_another_campaign_are_refused(pages: Pages) -> None:
+    session = pages.open()
+    before = session._screen(), trail_of(session)
+    give(session, "bundle", "sent.zip", with_samples(2, column="odd"))
+    assert "samples.csv" in heading(session)["error"]
+    assert (session._screen(), trail_of(session)) == before
 
 
 @pytest.mark.parametrize("data", [b"no zip", b"PK\x03\x04", dumps(FIRST).encode()])

@@ -10,8 +10,8 @@ class Trail {
     this.asked = 0; // message that asked for another entry; states before its answer are older
     this.base = this.number();
     this.top = Math.max(this.base, history.state?.lozenge === undefined ? 0 : Number(sessionStorage.getItem(TOP)) || 0);
-    this.undo = button("Undo", "", () => history.back());
-    this.redo = button("Redo", "", () => history.forward());
+    this.undo = button("Undo", "", () => history.back(), "walk");
+    this.redo = button("Redo", "", () => history.forward(), "walk");
     this.copy = button("Copy link", "", () => this.copied());
     this.said = make("span", { class: "said", role: "status" });
     this.node = make("div", { class: "buttons trail" }, this.undo, this.redo, this.copy, this.said);
@@ -28,7 +28,6 @@ class Trail {
 
   number() { return history.state?.lozenge ?? 0; }
 
-  // Entries that the browser has dropped from its end cannot be reached.
   lowest() { return Math.max(0, this.top - (history.length - 1)); }
 
   write(way, number, query) {
@@ -51,6 +50,7 @@ class Trail {
     this.dress();
   }
 
+  // A browser remembers no more than some fifty entries.
   dress() {
     this.undo.disabled = this.number() <= this.lowest();
     this.redo.disabled = this.number() >= this.top;
@@ -71,7 +71,7 @@ class Trail {
     if (at.isContentEditable || at.matches?.("textarea, input:not([type=range], [type=radio], [type=checkbox], [type=file])")) return;
     event.preventDefault();
     const way = event.shiftKey ? this.redo : this.undo;
-    if (!way.disabled) way.click();
+    if (!way.disabled && !way.inert) way.click();
   }
 
   async copied() {
@@ -99,7 +99,6 @@ class Lost {
     this.text = make("p", {});
     this.node = make("div", { class: "lost", role: "alert", hidden: true }, this.text,
       button("Reload", "Loads the page again; its address holds this screen.", () => this.reload(), "primary"));
-    this.watched = null;
     this.watch();
   }
 
@@ -114,8 +113,9 @@ class Lost {
     this.text.textContent = "The server does not answer any more: what is shown stays, and nothing can be changed. "
       + "Start Lozenge again on the same port, then reload; the address brings this screen back.";
     this.node.hidden = false;
-    for (const part of this.column.querySelectorAll(".group, .work, header > .buttons")) part.inert = true;
-    document.documentElement.dataset.lost = "true";
+    const idle = [...this.column.querySelectorAll(".group, .work, header > .buttons, .trail > .walk"),
+      ...[...document.querySelectorAll("section.view")].map((view) => view.firstElementChild)];
+    for (const part of idle) part.inert = true;
   }
 
   async reload() {
