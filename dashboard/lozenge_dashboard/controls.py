@@ -26,8 +26,10 @@ __all__ = [
 ]
 
 ASSETS = Path(__file__).parent / "assets"
-FIELDS_JS = (ASSETS / "fields.js").read_text(encoding="utf-8")
-"""Native inputs, which every column of controls is made of."""
+FIELDS_JS = "".join(
+    (ASSETS / name).read_text(encoding="utf-8") for name in ("fields.js", "lost.js")
+)
+"""Native inputs, which every column of controls is made of, and what it says of a lost server."""
 LIVE_LOW, LIVE_HIGH = 200, 5000
 """Ends of the elements' slider: what is computed while it is dragged."""
 POINTS_LIMIT = 40_000_000

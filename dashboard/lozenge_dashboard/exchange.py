@@ -75,11 +75,12 @@ class Uploads:
         held = self._held.setdefault(purpose, bytearray())
         if message["data"] is None or len(held) + len(message["data"]) * 3 // 4 > limit + 3:
             self._held.pop(purpose)
+            smaller = "choose a smaller file"
             raise refuse(
                 "file",
                 given=f"{message['size']} bytes",
                 allowed=f"at most {limit} bytes",
-                do="choose a smaller file",
+                do="check it with lozenge verify" if purpose == "bundle" else smaller,
             )
         try:
             held += base64.b64decode(message["data"], validate=True)

@@ -120,8 +120,7 @@ export function render({ model, el }) {
   const behind = background(act);
   const trail = new Trail(sender, model);
   const column = make("div", { class: "column", "aria-label": "Controls", role: "form" }, head.node, trail.node, job.node);
-  const lost = new Lost(column);
-  column.prepend(lost.node);
+  new Lost(column, "the address brings this screen back");
   for (const spec of model.groups) {
     const [cost, node] = buildGroup(spec, fields, sender, model);
     costs.set(spec.title, cost);

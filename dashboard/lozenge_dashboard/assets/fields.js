@@ -151,12 +151,12 @@ class NumberField extends Field {
 class SliderField extends NumberField {
   slider() {
     const spec = this.spec;
-    this.repeating = false;
+    this.keyed = this.repeating = false;
     this.range = this.describe(make("input", {
       type: "range", id: `${spec.name}-range`, "aria-label": spec.label,
       oninput: () => { this.held = true; const v = this.value(); this.box.value = spec.whole ? spoken(v) : shown(v); this.speak(v); this.send(v, false); },
-      onchange: () => { this.held = this.repeating; this.send(this.value(), !this.repeating); },
-      onkeydown: (event) => { this.repeating = event.repeat; },
+      onchange: () => { this.held = this.repeating = this.keyed; this.send(this.value(), !this.keyed); },
+      onkeydown: (event) => { this.keyed = event.repeat; },
       onkeyup: () => this.rest(),
       onblur: () => { this.held = false; this.rest(); },
     }));
@@ -166,6 +166,7 @@ class SliderField extends NumberField {
 
   // A key that is held down drags; the value settles when it is let go.
   rest() {
+    this.keyed = false;
     if (!this.repeating) return;
     this.held = this.repeating = false;
     this.send(this.value(), true);

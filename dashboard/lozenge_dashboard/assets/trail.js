@@ -2,16 +2,18 @@
 // walk along the same list as the browser's back and forward.
 
 const TOP = "lozenge-top"; // number of the newest entry, kept for this tab
+const WALK = 1000; // ms after which an entry that did not come is given up
 
 class Trail {
   constructor(sender, model) {
     this.sender = sender;
     this.model = model;
     this.asked = 0; // message that asked for another entry; states before its answer are older
+    this.target = null; // entry that the browser is on its way to
     this.base = this.number();
     this.top = Math.max(this.base, history.state?.lozenge === undefined ? 0 : Number(sessionStorage.getItem(TOP)) || 0);
-    this.undo = button("Undo", "", () => history.back(), "walk");
-    this.redo = button("Redo", "", () => history.forward(), "walk");
+    this.undo = button("Undo", "", () => this.walk(-1), "walk");
+    this.redo = button("Redo", "", () => this.walk(1), "walk");
     this.copy = button("Copy link", "", () => this.copied());
     this.said = make("span", { class: "said", role: "status" });
     this.node = make("div", { class: "buttons trail" }, this.undo, this.redo, this.copy, this.said);
@@ -28,19 +30,33 @@ class Trail {
 
   number() { return history.state?.lozenge ?? 0; }
 
+  // Where the browser is, or will be: it walks a moment later, and must not be sent off the list.
+  there() { return this.target ?? this.number(); }
+
+  walk(by) {
+    const next = this.there() + by;
+    if (next < this.lowest() || next > this.top) return;
+    this.target = next;
+    clearTimeout(this.patience);
+    this.patience = setTimeout(() => { this.target = null; this.dress(); }, WALK);
+    history.go(by);
+    this.dress();
+  }
+
   lowest() { return Math.max(0, this.top - (history.length - 1)); }
 
   write(way, number, query) {
+    this.target = null;
     history[way]({ lozenge: number }, "", query ? `${location.pathname}?${query}` : location.href);
   }
 
   update(state, answered) {
-    if (answered >= this.asked && state.query) {
+    if (answered >= this.asked) {
       const number = this.base + state.step;
       if (number > this.number()) {
         for (let next = this.number() + 1; next <= number; next++) this.write("pushState", next, state.query);
         this.top = number;
-      } else if (history.state === null || location.search.slice(1) !== state.query) {
+      } else if (history.state === null || (state.query && location.search.slice(1) !== state.query)) {
         this.write("replaceState", this.number(), state.query);
       }
       sessionStorage.setItem(TOP, String(this.top));
@@ -52,14 +68,15 @@ class Trail {
 
   // A browser remembers no more than some fifty entries.
   dress() {
-    this.undo.disabled = this.number() <= this.lowest();
-    this.redo.disabled = this.number() >= this.top;
+    this.undo.disabled = this.there() <= this.lowest();
+    this.redo.disabled = this.there() >= this.top;
     this.undo.title = this.undo.disabled ? "No earlier state of this screen in this tab." : "Takes the last change back (Ctrl+Z).";
     this.redo.title = this.redo.disabled ? "No change was taken back." : "Makes the change again that was taken back (Ctrl+Shift+Z).";
   }
 
   followed() {
     if (history.state?.lozenge === undefined) return;
+    if (this.number() === this.target) this.target = null;
     this.sender.send({ kind: "go", step: this.number() - this.base, query: location.search.slice(1) });
     this.asked = this.sender.last;
     this.dress();
@@ -89,42 +106,5 @@ class Trail {
     }
     this.said.textContent = done ? "Copied." : "Not copied: the browser forbids it. Copy the address from its bar.";
     if (done) setTimeout(() => { this.said.textContent = ""; }, 3000);
-  }
-}
-
-// What stands on top of the column once the server is gone.
-class Lost {
-  constructor(column) {
-    this.column = column;
-    this.text = make("p", {});
-    this.node = make("div", { class: "lost", role: "alert", hidden: true }, this.text,
-      button("Reload", "Loads the page again; its address holds this screen.", () => this.reload(), "primary"));
-    this.watch();
-  }
-
-  // The document is there only after the column is made.
-  watch() {
-    const found = window.Bokeh?.documents?.[0];
-    if (!found) { setTimeout(() => this.watch(), 100); return; }
-    found.on_event("connection_lost", () => this.say());
-  }
-
-  say() {
-    this.text.textContent = "The server does not answer any more: what is shown stays, and nothing can be changed. "
-      + "Start Lozenge again on the same port, then reload; the address brings this screen back.";
-    this.node.hidden = false;
-    const idle = [...this.column.querySelectorAll(".group, .work, header > .buttons, .trail > .walk"),
-      ...[...document.querySelectorAll("section.view")].map((view) => view.firstElementChild)];
-    for (const part of idle) part.inert = true;
-  }
-
-  async reload() {
-    try {
-      await fetch(location.pathname, { method: "HEAD", cache: "no-store" });
-      location.reload();
-    } catch {
-      this.text.textContent = "The server does not answer yet. Start Lozenge again on the same port "
-        + `(${location.port}), then reload; the address brings this screen back.`;
-    }
   }
 }
