@@ -10,7 +10,7 @@ from lozenge_dashboard.controls import GROUPS, LIVE_HIGH, LIVE_LOW, VIEW_FIELDS,
 from lozenge_dashboard.settings import SETTINGS
 from lozenge_engine.bench import Bench, Limits
 from lozenge_engine.config import Setup
-from lozenge_engine.notation import duration
+from lozenge_engine.notation import duration, thousands
 from lozenge_engine.pipeline import DENSE_LIMIT
 
 __all__ = ["Behind", "Heading", "Job", "TwinNote", "column_state"]
@@ -45,6 +45,17 @@ class Job(NamedTuple):
     fraction: float | None = None
     can_compute: bool = False
     can_cancel: bool = False
+
+    @classmethod
+    def offer(cls, elements: int, seconds: float) -> Job:
+        """One that waits for its button."""
+        text = f"{thousands(elements)} elements: about {duration(seconds)}"
+        return cls(text, None, can_compute=True)
+
+    @classmethod
+    def running(cls, text: str, fraction: float, seconds: float) -> Job:
+        """One that runs, of a predicted length."""
+        return cls(f"{text} of about {duration(seconds)}", min(fraction, 0.98), can_cancel=True)
 
 
 class Behind(NamedTuple):

@@ -13,6 +13,7 @@ from lozenge_engine.geometry import MAX_REGIONS
 
 __all__ = [
     "ASSETS",
+    "BUNDLE_LIMIT",
     "FIELDS_JS",
     "GROUPS",
     "POINTS_LIMIT",
@@ -25,12 +26,15 @@ __all__ = [
 ]
 
 ASSETS = Path(__file__).parent / "assets"
-FIELDS_JS = (ASSETS / "fields.js").read_text(encoding="utf-8")
-"""Native inputs, which every column of controls is made of."""
+FIELDS_JS = "".join(
+    (ASSETS / name).read_text(encoding="utf-8") for name in ("fields.js", "lost.js")
+)
+"""Native inputs, which every column of controls is made of, and what it says of a lost server."""
 LIVE_LOW, LIVE_HIGH = 200, 5000
 """Ends of the elements' slider: what is computed while it is dragged."""
 POINTS_LIMIT = 40_000_000
 PRESET_LIMIT = 1_000_000
+BUNDLE_LIMIT = 20_000_000
 """Largest files that are sent to the server, in bytes."""
 
 RULES = (
@@ -181,7 +185,6 @@ POINTS = Group(
             "name": "points",
             "label": "Open points (CSV: t, x)",
             "accept": ".csv,text/csv",
-            "limit": POINTS_LIMIT,
             "hint": "Takes your own elements; the file may also be dropped on this column.",
         },
     ),
@@ -334,15 +337,18 @@ class Controls(JSComponent):
     shipped = param.List(doc="Names and titles of the shipped presets.")
     preset_limit = param.Integer(PRESET_LIMIT, doc="Largest preset file, in bytes.")
     points_limit = param.Integer(POINTS_LIMIT, doc="Largest points file, in bytes.")
+    bundle_limit = param.Integer(BUNDLE_LIMIT, doc="Largest bundle, in bytes.")
     state = param.Dict(
         doc="`fields` by name (value, low, high, disabled, closed, error, preset, hidden), "
-        "`costs` by group, `page` (heading) and `job` (work in progress)."
+        "`costs` by group, `page` (heading), `job` (work in progress) and `trail` (the address)."
     )
 
     campaign = param.String(doc="Address of the campaign page for this screen.")
     evidence = param.String(doc="Address of the evidence page for this screen.")
 
-    _esm: ClassVar[str] = FIELDS_JS + (ASSETS / "controls.js").read_text(encoding="utf-8")
+    _esm: ClassVar[str] = FIELDS_JS + "".join(
+        (ASSETS / name).read_text(encoding="utf-8") for name in ("trail.js", "controls.js")
+    )
     _stylesheets: ClassVar[list[str]] = [(ASSETS / "controls.css").read_text(encoding="utf-8")]
 
     def __init__(self, receive: Callable[[dict[str, Any]], None], **params: Any) -> None:

@@ -8,7 +8,7 @@ import re
 from pathlib import Path
 from typing import Any, NamedTuple
 
-from lozenge_dashboard.controls import POINTS_LIMIT, PRESET_LIMIT
+from lozenge_dashboard.controls import BUNDLE_LIMIT, POINTS_LIMIT, PRESET_LIMIT
 from lozenge_engine.config import Setup
 from lozenge_engine.errors import InputError, refuse
 from lozenge_engine.notation import thousands
@@ -31,8 +31,12 @@ PAGE_HIGH = 20_000
 """Most elements that the page computes; above it the command line does."""
 
 
+LIMITS = {"preset": PRESET_LIMIT, "points": POINTS_LIMIT, "bundle": BUNDLE_LIMIT}
+"""Largest file of each purpose, in bytes."""
+
+
 class Upload(NamedTuple):
-    """A whole file; `purpose` is ``preset`` or ``points``."""
+    """A whole file; `purpose` is ``preset``, ``points`` or ``bundle``."""
 
     purpose: str
     name: str
@@ -64,18 +68,19 @@ class Uploads:
         InputError
             If the file is too large or a part is not base64.
         """
-        purpose = "points" if message["purpose"] == "points" else "preset"
-        limit = POINTS_LIMIT if purpose == "points" else PRESET_LIMIT
+        purpose = message["purpose"] if message["purpose"] in LIMITS else "preset"
+        limit = LIMITS[purpose]
         if message["first"]:
             self._held[purpose] = bytearray()
         held = self._held.setdefault(purpose, bytearray())
         if message["data"] is None or len(held) + len(message["data"]) * 3 // 4 > limit + 3:
             self._held.pop(purpose)
+            smaller = "choose a smaller file"
             raise refuse(
                 "file",
                 given=f"{message['size']} bytes",
                 allowed=f"at most {limit} bytes",
-                do="choose a smaller file",
+                do="check it with lozenge verify" if purpose == "bundle" else smaller,
             )
         try:
             held += base64.b64decode(message["data"], validate=True)

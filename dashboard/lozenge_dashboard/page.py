@@ -13,7 +13,9 @@ import panel as pn
 
 from lozenge_dashboard.exchange import points_beside
 from lozenge_dashboard.jobs import Workshop
-from lozenge_dashboard.session import Server, Session
+from lozenge_dashboard.server import Server
+from lozenge_dashboard.session import Session
+from lozenge_dashboard.trail import Shelf
 from lozenge_dashboard.views.catalogue import register_all
 from lozenge_engine.pointfile import PointFile
 from lozenge_engine.presets import Preset, ViewState
@@ -67,8 +69,9 @@ def pages(
     # On WebGL, styles move to the wrong mark as soon as one of several kinds is out of sight.
     hv.renderer("bokeh").webgl = False
     register_all()
-    server = Server(stages, Workshop(), shipped)
     points = points_beside(preset, path)
+    server = Server(stages, Workshop(), shipped, preset, Shelf())
+    server.shelf.put(points)
     screens = _Screens(preset, points)
     folder = Path.cwd()
 
@@ -85,7 +88,7 @@ def pages(
     others = {CAMPAIGN: _Later(campaigns_made), EVIDENCE: _Later(evidence_made)}
 
     def page() -> pn.Template:
-        session = Session(server, preset, points=points)
+        session = Session(server, server.opening(_query()))
         key = screens.add(session)
         session.board.controls.param.update(
             campaign=f"{CAMPAIGN}?from={key}", evidence=f"{EVIDENCE}?from={key}"
@@ -110,6 +113,12 @@ def pages(
         server.workshop.close()
 
     return {"/": page, **{address: other.page for address, other in others.items()}}, close
+
+
+def _query() -> str:
+    """The query that the present page was asked for with."""
+    context = getattr(pn.state.curdoc, "session_context", None)
+    return str(getattr(getattr(context, "request", None), "query", None) or "")
 
 
 _Screen = tuple[Preset, PointFile | None]

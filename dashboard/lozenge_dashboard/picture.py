@@ -8,6 +8,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from lozenge_dashboard.controls import LIVE_HIGH
 from lozenge_dashboard.elsewhere import prepare_elsewhere
 from lozenge_engine.bench import continuum_eigenvalues
 from lozenge_engine.config import Setup
@@ -16,12 +17,14 @@ from lozenge_engine.pointfile import PointFile
 from lozenge_engine.result import Result
 from lozenge_engine.stages import Stages
 
-__all__ = ["Picture", "modes_key", "picture_of"]
+__all__ = ["Picture", "at_once", "modes_key", "picture_of"]
 
 CONTINUUM_MODES = 400
 """Most eigenvalues of the continuum that are drawn."""
 APART_FROM = 1.0
 """Predicted seconds from which a dense search gets a process of its own."""
+LIVE_SECONDS = 10.0
+"""A computation predicted to take longer waits for its button, however few the elements."""
 LEAST_SECONDS = 0.002
 """A stage that took less came from the cache."""
 
@@ -58,6 +61,13 @@ def picture_of(
         )
 
     return work
+
+
+def at_once(setup: Setup) -> bool:
+    """Whether a setup is small enough to be computed without being asked."""
+    if 2 * setup.points.density > LIVE_HIGH:
+        return False
+    return setup.rules()[0].kind != "none" or predict(setup.config()).seconds < LIVE_SECONDS
 
 
 def modes_key(setup: Setup) -> tuple[Any, ...]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any, NamedTuple, cast
+from typing import Any, cast
 
 import panel as pn
 from bokeh.document import Document
@@ -10,38 +10,28 @@ from bokeh.document import Document
 from lozenge_dashboard.behind import Backdrop, Wanted
 from lozenge_dashboard.board import Board
 from lozenge_dashboard.column import Heading, Job, column_state
-from lozenge_dashboard.controls import LIVE_HIGH, VIEW_FIELDS
+from lozenge_dashboard.controls import VIEW_FIELDS
 from lozenge_dashboard.desk import Desk
 from lozenge_dashboard.exchange import file_name
-from lozenge_dashboard.jobs import Flight, Progress, Workshop
+from lozenge_dashboard.jobs import Flight, Progress
 from lozenge_dashboard.palette import LOOKS
-from lozenge_dashboard.picture import Picture, modes_key, picture_of
+from lozenge_dashboard.picture import Picture, at_once, modes_key, picture_of
 from lozenge_dashboard.records import Scene
+from lozenge_dashboard.server import Server
 from lozenge_dashboard.switches import choices_of, switched, view_of
+from lozenge_dashboard.trail import Opening
 from lozenge_dashboard.turn import Turn
 from lozenge_engine.config import Config, Setup
 from lozenge_engine.errors import InputError
-from lozenge_engine.notation import duration, thousands
+from lozenge_engine.notation import duration
 from lozenge_engine.pipeline import predict
-from lozenge_engine.pointfile import PointFile
-from lozenge_engine.presets import FIRST, Preset, compare, dumps
+from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps
 from lozenge_engine.result import Result
-from lozenge_engine.stages import Stages
 
-__all__ = ["Server", "Session"]
+__all__ = ["Session"]
 
-LIVE_SECONDS = 10.0
-"""A computation predicted to take longer waits for its button, however few the elements."""
 FRONT = ("sprinkling", "spectrum", "counts", "entropies")
 SWEEPS = ("scaling", "separation")
-
-
-class Server(NamedTuple):
-    """What all pages share."""
-
-    stages: Stages
-    workshop: Workshop
-    shipped: dict[str, Preset]
 
 
 class Session:
@@ -51,17 +41,16 @@ class Session:
     ----------
     server : Server
         What all pages share.
-    preset : Preset
+    opening : Opening
         The screen to open with.
-    points : PointFile or None
-        Imported points that the preset asks for.
     """
 
-    def __init__(self, server: Server, preset: Preset, *, points: PointFile | None = None) -> None:
+    def __init__(self, server: Server, opening: Opening) -> None:
         self.server = server
-        self.desk = Desk(preset, server.shipped[FIRST], points=points)
+        self.desk = Desk(opening, server.shipped[FIRST])
         self.bench = self.desk.bench
-        view = self.desk.preset.view
+        self.trail = server.trail(opening)
+        view = self.desk.view
         self.theme = view.theme
         self.focus = view.focus
         self.choices = choices_of(view)
@@ -76,6 +65,7 @@ class Session:
         self._modes_of: object = None
         self._answered = 0
         self._computing = False
+        self._stand(opening)
         self.turn = Turn(cast(Document, pn.state.curdoc))  # a page is made in its own document
         self.picture = Flight(self.turn.later(self._pictured), self.turn.later(self._progressed))
         self.backdrop = Backdrop(server.workshop, later=self.turn.later, show=self._gathered)
@@ -127,6 +117,8 @@ class Session:
                 self._act(message["name"], message.get("value"))
             elif kind == "file":
                 self._take_part(message)
+            elif kind == "go":
+                self._go(self.trail.go(message))
             self._push()
 
     def receive_view(self, name: str, message: dict[str, Any]) -> None:
@@ -159,7 +151,7 @@ class Session:
         if setup is None:
             return
         if setup != before:
-            self.agreement = ""
+            self.agreement = self.desk.note = ""
             self._request()
         elif settled:
             self._settle()
@@ -200,7 +192,8 @@ class Session:
     def _opened(self, *, arrange: bool = True) -> None:
         """Look as the preset says that was opened."""
         self.agreement, self.settled = "", True
-        view = self.desk.preset.view
+        self.trail.opened(self.desk.preset, self.bench.file)
+        view = self.desk.view
         self.choices = choices_of(view, self.choices)
         if arrange:
             self.focus = view.focus
@@ -212,18 +205,33 @@ class Session:
     def _take_part(self, message: dict[str, Any]) -> None:
         """Take a part of a file; the last one opens it."""
         opened = self.desk.take(message)
-        if opened == "preset":
+        if opened == "points":
+            self.desk.view = self._screen()[1]
+        if opened is not None:
+            self._opened(arrange=opened == "preset")
+
+    def _go(self, opening: Opening) -> None:
+        """Show what the browser went back or forward to."""
+        if self.desk.arrive(opening):
             self._opened()
-        elif opened == "points":
-            self.agreement, self.settled = "", True
-            self._request()
+        self._stand(opening)
+
+    def _stand(self, opening: Opening) -> None:
+        """Leave an address as it is while it says more than could be taken of it."""
+        if self.desk.errors.get("preset"):
+            self.trail.stay(self._screen(), opening)
+
+    def _screen(self) -> tuple[Setup, ViewState, str]:
+        """What the address carries."""
+        view = view_of(self.choices, theme=self.theme, focus=self.focus)
+        return self.bench.setup(), view, self.desk.preset.title
 
     def _save(self) -> None:
         """Let the browser download the screen as a preset, with the numbers shown."""
         setup = self.bench.setup()
         shown = self.scene is not None and self.scene.setup == setup
-        view = view_of(self.choices, theme=self.theme, focus=self.focus)
-        preset = self.desk.as_preset(view, self.scene.result if shown and self.scene else None)
+        result = self.scene.result if shown and self.scene else None
+        preset = self.desk.as_preset(self._screen()[1], result)
         try:
             self.board.controls.download(file_name(preset), dumps(preset))
         except InputError as error:
@@ -249,20 +257,14 @@ class Session:
 
     def _live(self, setup: Setup) -> bool:
         """Whether a setup is computed at once: small, asked for, or its modes are known."""
-        config = setup.config()
-        if self._pressed == config or self._modes_of == modes_key(setup):
-            return True
-        if 2 * setup.points.density > LIVE_HIGH:
-            return False
-        return setup.rules()[0].kind != "none" or predict(config).seconds < LIVE_SECONDS
+        known = self._pressed == setup.config() or self._modes_of == modes_key(setup)
+        return known or at_once(setup)
 
     def _offer(self, setup: Setup) -> None:
         """Ask before a long computation, with its predicted time."""
         self.picture.cancel()
         self._computing = False
-        elements = thousands(round(2 * setup.points.density))
-        seconds = duration(predict(setup.config()).seconds)
-        self.job = Job(f"{elements} elements: about {seconds}", None, can_compute=True)
+        self.job = Job.offer(round(2 * setup.points.density), predict(setup.config()).seconds)
         self.board.stale_all("earlier")
         self.board.status("")
 
@@ -275,11 +277,7 @@ class Session:
         self.board.status(text, busy=True)
         if progress.seconds > 1.0:
             whole = predict(self.bench.config()).seconds
-            self.job = Job(
-                f"{text} of about {duration(whole)}",
-                min(progress.seconds / whole, 0.98),
-                can_cancel=True,
-            )
+            self.job = Job.running(text, progress.seconds / whole, whole)
             self._push()
 
     def _pictured(self, outcome: Picture | Exception) -> None:
@@ -372,11 +370,14 @@ class Session:
         self.board.controls.state = self._state()
 
     def _state(self) -> dict[str, Any]:
+        if self.settled:
+            screen = self._screen()
+            self.trail.note(screen, lambda: self.desk.as_preset(screen[1], None))
         preset = self.desk.preset
         heading = Heading(
             title=preset.title,
             sentence=preset.sentence,
-            agreement=self.agreement,
+            agreement=" ".join(filter(None, (self.agreement, self.desk.note))),
             differs=self.differs,
             error=self.desk.errors.get("preset", "") or self.failure,
             keeping=self.kept is not None,
@@ -394,4 +395,4 @@ class Session:
             behind=self.backdrop.progress,
             twin=self.backdrop.twin_note(self.bench.setup(), twin=self.choices.twin),
         )
-        return {**state, "answered": self._answered}
+        return {**state, "answered": self._answered, "trail": self.trail.state()}

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import io
 import math
 import zlib
 from collections.abc import Callable, Sequence
@@ -12,11 +10,11 @@ from typing import Literal, NamedTuple
 
 import numpy as np
 
+from lozenge_dashboard.bundle_rows import Key, layout_of, rows_of
 from lozenge_dashboard.campaign_files import sample_columns, sample_rows
 from lozenge_engine.agreement import TOLERANCE
 from lozenge_engine.bundle import Bundle
-from lozenge_engine.design import Design, design
-from lozenge_engine.errors import refuse
+from lozenge_engine.design import Design
 from lozenge_engine.pipeline import compute
 from lozenge_engine.presets import Preset, compare
 from lozenge_engine.realisation import Record, realise
@@ -32,8 +30,6 @@ NEAR = 1e-9
 ten times what the residuals of the search leave open (`lozenge_engine.kernels.modes`)."""
 NUMBERS_OF_RUN = ("seconds",)
 """Columns that no second run repeats."""
-Key = tuple[int, int]
-"""Sprinkling and realisation."""
 
 
 class Checked(NamedTuple):
@@ -129,8 +125,8 @@ def verify(
     rows: list[Checked] = []
     held = 0
     if bundle.samples:
-        layout = _layout(bundle.preset)
-        samples = _samples(bundle.samples, layout)
+        layout = layout_of(bundle.preset)
+        samples = rows_of(bundle.samples, layout)
         held = sum(map(len, samples.values()))
         chosen = _spread(sorted(samples), realisations)
         for done, key in enumerate(chosen):
@@ -160,48 +156,6 @@ def _sender(preset: Preset) -> tuple[str, bool]:
 
 
 # ---------------------------------------------------------------- the samples
-
-
-def _layout(preset: Preset) -> Design:
-    if preset.campaign is None:
-        raise refuse(
-            "the bundle",
-            given="samples beside a preset without a campaign",
-            allowed="the preset that the samples were computed from",
-            do="get the bundle again",
-        )
-    return design(preset.setup, preset.campaign)
-
-
-def _samples(text: str, layout: Design) -> dict[Key, list[list[str]]]:
-    """The rows of each realisation, when they are those of this campaign."""
-    try:
-        head, *body = csv.reader(io.StringIO(text, newline=""), strict=True)
-    except (csv.Error, ValueError) as error:
-        raise _not_these("text that is no table") from error
-    columns = sample_columns(layout)
-    if head != columns:
-        odd = next((a for a, b in zip(head, columns, strict=False) if a != b), "their number")
-        raise _not_these(f"other columns, the first of them {odd[:40]}")
-    place = {(own.kind, repr(own.density)): g for g, own in enumerate(layout.sprinklings)}
-    found: dict[Key, list[list[str]]] = {}
-    for number, row in enumerate(body, start=2):
-        if len(row) != len(columns):
-            raise _not_these(f"line {number} with {len(row)} fields")
-        sprinkling = place.get((row[0], row[1]))
-        if sprinkling is None or not (row[2].isascii() and row[2].isdigit() and len(row[2]) < 8):
-            raise _not_these(f"line {number}: {','.join(row[:3])[:60]}")
-        found.setdefault((sprinkling, int(row[2])), []).append(row)
-    return found
-
-
-def _not_these(given: str) -> Exception:
-    return refuse(
-        "samples.csv",
-        given=given,
-        allowed="the samples of the bundle's own preset",
-        do="get the bundle again",
-    )
 
 
 def _spread(keys: Sequence[Key], count: int | None) -> list[Key]:

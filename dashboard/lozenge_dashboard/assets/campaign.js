@@ -216,6 +216,7 @@ export function render({ model, el }) {
   }
   const forecast = prediction(act);
   column.append(forecast.node, forecast.bar);
+  new Lost(column, "finished realisations are in their results file");
   const update = () => {
     const state = model.state;
     sender.answered(state.answered);

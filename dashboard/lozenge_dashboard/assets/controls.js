@@ -13,9 +13,16 @@ async function sendFile(file, purpose, limit, model) {
   }
 }
 
+// Sends a file for what its name says that it is.
+function give(file, model, name) {
+  const end = file.name.toLowerCase().split(".").pop();
+  const purpose = name === "points" || end === "csv" ? "points" : end === "zip" ? "bundle" : "preset";
+  sendFile(file, purpose, model[`${purpose}_limit`], model);
+}
+
 function opener(spec, model) {
   const input = make("input", { type: "file", accept: spec.accept, class: "unseen", tabindex: -1, "aria-label": spec.label,
-    onchange: () => { for (const file of input.files) sendFile(file, spec.name, spec.limit, model); input.value = ""; } });
+    onchange: () => { for (const file of input.files) give(file, model, spec.name); input.value = ""; } });
   return [make("button", { type: "button", title: spec.hint, onclick: () => input.click() }, spec.label), input];
 }
 
@@ -31,7 +38,7 @@ function heading(model, act) {
   };
   const shipped = make("select", { "aria-label": "Shipped presets", onchange: () => { model.send_msg({ kind: "act", name: "shipped", value: shipped.value }); shipped.value = ""; } },
     make("option", { value: "" }, "Presets"), ...model.shipped.map(([value, label]) => make("option", { value }, label)));
-  const files = opener({ name: "preset", label: "Open", accept: ".json,application/json", limit: model.preset_limit, hint: "Loads a preset file; it may also be dropped on this column." }, model);
+  const files = opener({ name: "preset", label: "Open", accept: ".json,.zip,application/json,application/zip", hint: "Loads a preset file or a bundle; it may also be dropped on this column." }, model);
   const saver = make("button", { type: "button", onclick: () => act("save"), title: "Downloads this screen as a preset file, with its numbers." }, "Save");
   parts.node = make("header", {}, parts.title, parts.sentence, parts.agreement,
     make("div", { class: "buttons" }, shipped, ...files, saver, parts.back, parts.keep, parts.theme, parts.campaign, parts.evidence), parts.error);
@@ -111,7 +118,9 @@ export function render({ model, el }) {
   const head = heading(model, act);
   const job = work(act);
   const behind = background(act);
-  const column = make("div", { class: "column", "aria-label": "Controls", role: "form" }, head.node, job.node);
+  const trail = new Trail(sender, model);
+  const column = make("div", { class: "column", "aria-label": "Controls", role: "form" }, head.node, trail.node, job.node);
+  new Lost(column, "the address brings this screen back");
   for (const spec of model.groups) {
     const [cost, node] = buildGroup(spec, fields, sender, model);
     costs.set(spec.title, cost);
@@ -121,13 +130,11 @@ export function render({ model, el }) {
   column.addEventListener("dragover", (event) => event.preventDefault());
   column.addEventListener("drop", (event) => {
     event.preventDefault();
-    for (const file of event.dataTransfer.files) {
-      const points = file.name.toLowerCase().endsWith(".csv");
-      sendFile(file, points ? "points" : "preset", points ? model.points_limit : model.preset_limit, model);
-    }
+    for (const file of event.dataTransfer.files) give(file, model);
   });
   const update = () => {
     sender.answered(model.state.answered);
+    trail.update(model.state.trail, model.state.answered);
     for (const [name, field] of fields) field.update(model.state.fields[name]);
     for (const [title, cost] of costs) cost.textContent = model.state.costs[title] || "";
     updateHeading(head, model.state.page);
@@ -136,6 +143,7 @@ export function render({ model, el }) {
   };
   model.on("state", update);
   model.on("msg:custom", (message) => { if (message.kind === "download") save(message.name, message.text); });
+  model.on("remove", () => trail.remove());
   update();
   el.append(column);
 }

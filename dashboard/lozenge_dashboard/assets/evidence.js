@@ -116,6 +116,7 @@ export function render({ model, el }) {
   const file = due(act);
   const works = queue(act);
   column.append(file.node, works.node);
+  new Lost(column, "what is in a results file stays there, and the rest is computed again");
   const update = () => {
     const state = model.state;
     sender.answered(state.answered);

@@ -151,14 +151,25 @@ class NumberField extends Field {
 class SliderField extends NumberField {
   slider() {
     const spec = this.spec;
+    this.keyed = this.repeating = false;
     this.range = this.describe(make("input", {
       type: "range", id: `${spec.name}-range`, "aria-label": spec.label,
       oninput: () => { this.held = true; const v = this.value(); this.box.value = spec.whole ? spoken(v) : shown(v); this.speak(v); this.send(v, false); },
-      onchange: () => { this.held = false; this.send(this.value(), true); },
-      onblur: () => { this.held = false; },
+      onchange: () => { this.held = this.repeating = this.keyed; this.send(this.value(), !this.keyed); },
+      onkeydown: (event) => { this.keyed = event.repeat; },
+      onkeyup: () => this.rest(),
+      onblur: () => { this.held = false; this.rest(); },
     }));
     this.inputs.push(this.range);
     return this.range;
+  }
+
+  // A key that is held down drags; the value settles when it is let go.
+  rest() {
+    this.keyed = false;
+    if (!this.repeating) return;
+    this.held = this.repeating = false;
+    this.send(this.value(), true);
   }
 
   speak(value) {
