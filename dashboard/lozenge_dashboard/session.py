@@ -26,7 +26,6 @@ from lozenge_engine.errors import InputError
 from lozenge_engine.notation import duration
 from lozenge_engine.pipeline import predict
 from lozenge_engine.presets import FIRST, Preset, ViewState, compare, dumps
-from lozenge_engine.result import Result
 
 __all__ = ["Session"]
 
@@ -303,7 +302,7 @@ class Session:
             continuum=picture.continuum,
             **self.backdrop.parts(picture.setup),
         )
-        self._compare(picture.result)
+        self._compare(picture)
         self._mark_stale()
         self._paint()
 
@@ -316,11 +315,11 @@ class Session:
         self.board.frames[place].say(self.failure, error=True)
         self.board.status("not computed")
 
-    def _compare(self, result: Result) -> None:
-        """Say whether the sender's numbers agree, while the setup is the sender's."""
+    def _compare(self, picture: Picture) -> None:
+        """Say whether the sender's numbers agree, when the picture is of the sender's setup."""
         preset = self.desk.preset
-        if preset.sender is not None and self.bench.setup() == preset.setup:
-            agreement = compare(preset, result)
+        if preset.sender is not None and self.bench.setup() == preset.setup == picture.setup:
+            agreement = compare(preset, picture.result)
             self.agreement, self.differs = (
                 f"Sender's numbers: {agreement.text}.",
                 not agreement.agrees,

@@ -6,6 +6,7 @@ the time and memory that each takes.
 
 from __future__ import annotations
 
+import copy
 import functools
 import io
 import json
@@ -195,7 +196,7 @@ def odd_presets(draw: st.DrawFn) -> Damaged:
             keys = sorted(part) if isinstance(part, dict) else range(len(part))
             key = draw(st.sampled_from(list(keys)))
             if not isinstance(part[key], dict | list) or draw(st.booleans()):
-                part[key] = draw(st.sampled_from(ODD_VALUES))
+                part[key] = copy.deepcopy(draw(st.sampled_from(ODD_VALUES)))
                 break
             part = part[key]
     return Damaged(json.dumps(document).encode("utf-8", "surrogatepass"), ())

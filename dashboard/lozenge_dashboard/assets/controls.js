@@ -90,7 +90,7 @@ function updateBackground(parts, state) {
   parts.text.textContent = state.text;
   parts.action = state.action;
   parts.button.hidden = !state.action;
-  parts.button.textContent = state.action === "halt" ? "Cancel" : "Resume";
+  parts.button.textContent = state.action === "halt" ? "Pause" : "Resume";
 }
 
 function buildGroup(spec, fields, sender, model) {
