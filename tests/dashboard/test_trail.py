@@ -18,6 +18,7 @@ from lozenge_dashboard.bundle_rows import layout_of
 from lozenge_dashboard.campaign_files import sample_columns
 from lozenge_dashboard.exchange import as_preset
 from lozenge_dashboard.jobs import Workshop
+from lozenge_dashboard.picture import Picture
 from lozenge_dashboard.server import Server
 from lozenge_dashboard.session import Session
 from lozenge_dashboard.trail import POINT_FILES, Opening, Shelf, Trail, named, opening_of
@@ -320,7 +321,7 @@ def test_bundle_opens_its_preset_and_says_what_else_it_holds(pages: Pages) -> No
     give(session, "bundle", "sent.zip", data)
     assert (session.desk.preset, session.theme) == (sent, "dark")
     assert heading(session)["agreement"] == "The bundle holds 1 figure."
-    session._compare(bare().result)
+    session._compare(Picture(session.bench.setup(), bare().result, bare().continuum))
     session._push()
     assert "Sender's numbers: same points" in heading(session)["agreement"]
     assert "1 figure" in heading(session)["agreement"]
