@@ -70,7 +70,7 @@ class Page(pn.Template):
     def server_doc(
         self, doc: Document | None = None, title: str | None = None, location: Any = True
     ) -> Document:
-        """Attach the page to a document; the address of the page carries no state."""
+        """Attach the page to a document; Panel itself keeps no state in the address."""
         del location
         document = doc or cast(Document, pn.state.curdoc)
         with document.models.freeze():

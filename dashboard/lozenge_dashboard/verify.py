@@ -15,6 +15,7 @@ from lozenge_dashboard.campaign_files import sample_columns, sample_rows
 from lozenge_engine.agreement import TOLERANCE
 from lozenge_engine.bundle import Bundle
 from lozenge_engine.design import Design
+from lozenge_engine.errors import InputError
 from lozenge_engine.pipeline import compute
 from lozenge_engine.presets import Preset, compare
 from lozenge_engine.realisation import Record, realise
@@ -259,12 +260,9 @@ def _nearest(layout: Design, key: Key) -> list[float]:
     found = []
     for i in own.cells:
         cell = layout.cells[i]
-        found.append(
-            min(
-                nearest_to_a_cut(
-                    compute(replace(cell.config, points=source, regions=regions), stages=stages)
-                )
-                for regions in cell.layouts
-            )
-        )
+        configs = [replace(cell.config, points=source, regions=one) for one in cell.layouts]
+        try:
+            found.append(min(nearest_to_a_cut(compute(c, stages=stages)) for c in configs))
+        except InputError:  # a sample without numbers, as on the sender's side
+            found.append(math.inf)
     return found

@@ -104,6 +104,21 @@ def test_rows_of_another_campaign_are_refused(made: Bundle, column: str, text: s
         checked(with_field(made, 1, column, lambda _: text))
 
 
+def test_a_cell_that_cannot_be_computed_hides_no_other(tmp_path: Path) -> None:
+    """A region of hardly an element has no numbers here either; the larger one is checked."""
+    plan = CampaignPlan(axes=(Axis(name="half_width", values=(0.02, 0.4)),), realisations=1)
+    setup = Setup(points=PointSource(density=80.0, seed=5), region_count=1)
+    preset = Preset(title="Small", sentence="A small one.", setup=setup, campaign=plan)
+    presets.write(tmp_path / "small.json", preset)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(campaign_run, "Processes", ThreadPoolExecutor)
+        names = (str(tmp_path / "small.json"), str(tmp_path / "small.sqlite"))
+        assert cli.main(["run", names[0], "--results", names[1]]) == cli.NOT_TRUSTED
+    found = checked(bundle_run.bundle_of_results(tmp_path / "small.sqlite"))
+    assert {row.verdict for row in found.rows} == {"identical"}
+    assert len(found.rows) == 2
+
+
 def test_a_mode_near_a_cut_is_flagged(made: Bundle) -> None:
     result = compute(SETUP.config())
     cut = result.regions[0].cut
